@@ -1,0 +1,1 @@
+"""A filtering stage for scheduled data pipelines: chunked recordings, exact results."""

@@ -1,0 +1,1 @@
+"""The source: opening it, checking its time axis, reading and decoding slabs."""
