@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 from itertools import product as all_pairs
 from math import ceil, prod
 
@@ -227,7 +228,7 @@ def plan_spans(
         units = max(1, ceil(samples / grid.time_unit))
         pieces = max(1, total // units)
         edges = [round(index * total / pieces) for index in range(pieces + 1)]
-        spans += [Span(low, high, box) for low, high in zip(edges, edges[1:], strict=False)]
+        spans += [Span(low, high, box) for low, high in pairwise(edges)]
     return spans
 
 

@@ -136,6 +136,7 @@ class _Work:
         self.input_digests: dict[int, dict[tuple[int, ...], bytes]] = {}
 
     def run(self) -> Carry:
+        self._digest_complete()
         for stretch, low, high in self.job.stretches.within(self.start, self.stop):
             stream = self.carry.stream
             if stream is None or low == 0:
@@ -147,7 +148,7 @@ class _Work:
             while stream.next_result < high:
                 for slab in self._pushed(stream, stretch.start):
                     self._give(slab)
-            if stream.ended:
+            if high == stretch.length:  # else results that ran ahead still belong to it
                 self.carry.stream = None
         self._drop_raw()
         return self.carry
@@ -170,11 +171,16 @@ class _Work:
             yield stream.push(piece)
 
     def _keep_raw(self, start: int, raw: Array) -> None:
-        """Keeps the samples of this and later spans; digests units now complete."""
+        """Keeps the samples of this and later spans until their unit is complete."""
         dim = self.job.reader.time_dim
         skip = max(0, self.start - start)
         if skip < raw.shape[dim]:
             self.raw.append((start + skip, _cut(raw, dim, skip, raw.shape[dim])))
+        self._digest_complete()
+
+    def _digest_complete(self) -> None:
+        """Digests the units of this span whose samples have all been read."""
+        dim = self.job.reader.time_dim
         unit = self.job.grid.time_unit
         while self.raw:
             first = self.raw[0][0]

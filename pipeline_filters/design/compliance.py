@@ -102,7 +102,7 @@ def _on_grid(
             radius, _ = pole_radius(response.sections)
             points = max(points, int(min(_MOST_POINTS, 32 / max(1 - radius, 1e-9))))
     points = next_fast_len(points, real=True)
-    grid_hz = np.arange(points + 1) * (rate_hz / 2 / points)
+    grid_hz: NDArray[np.float64] = np.linspace(0.0, rate_hz / 2, points + 1)
     values = np.ones(points + 1)
     for response in responses:
         if isinstance(response, TapsResponse):

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from fractions import Fraction
 from math import log10
 
@@ -47,9 +48,7 @@ def design_equiripple(filter: Filter, rate_hz: Fraction, timing: Timing) -> Resp
     bands = sorted_bands(bands_of(filter, least=2), filter, rate)
     search = _Search(bands, rate, squared)
     ripples = [ripple for _, ripple in search.targets]
-    widths = [
-        upper.low_hz - (lower.high_hz or 0) for lower, upper in zip(bands, bands[1:], strict=False)
-    ]
+    widths = [upper.low_hz - (lower.high_hz or 0) for lower, upper in itertools.pairwise(bands)]
     start = max(3, int(0.85 * estimated_length(max(ripples), min(ripples), min(widths) / rate)))
     low, high, step = start - 1, start, 2
     while not search.meets(high):

@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
+import itertools
 from fractions import Fraction
 from math import ceil, cos, log10, pi, tan
+from typing import Literal
 
 import numpy as np
 from scipy.signal import butter
 
-from pipeline_filters.design.compliance import check_bands, linear_bounds
+from pipeline_filters.design.compliance import BandFinding, check_bands, linear_bounds
 from pipeline_filters.design.contract import Response, SectionsResponse
 from pipeline_filters.design.settings import corner_settings, frequency_setting
 from pipeline_filters.design.verdicts import bands_of, refuse_unmet, sorted_bands
@@ -16,7 +18,8 @@ from pipeline_filters.errors import Problem, SpecError
 from pipeline_filters.spec.model import Band, Filter, Timing
 
 MOST_ORDER = 24
-_SCIPY_SHAPE = {
+_ScipyShape = Literal["lowpass", "highpass", "bandpass", "bandstop"]
+_SCIPY_SHAPE: dict[str, _ScipyShape] = {
     "low-pass": "lowpass",
     "high-pass": "highpass",
     "band-pass": "bandpass",
@@ -43,7 +46,8 @@ def design_butterworth(filter: Filter, rate_hz: Fraction, timing: Timing) -> Res
         notes = [f"butterworth: order {order}, {shape}"]
         if timing == "zero-phase":
             notes.append("run forward and backward, it reads -6.02 dB at its corners")
-        sections = butter(order, corners, _SCIPY_SHAPE[shape], fs=float(rate_hz), output="sos")
+        at = corners[0] if len(corners) == 1 else corners
+        sections = butter(order, at, _SCIPY_SHAPE[shape], fs=float(rate_hz), output="sos")
         return SectionsResponse(sections, filter.settle, tuple(notes))
     return _from_bands(filter, float(rate_hz), timing == "zero-phase")
 
@@ -74,7 +78,7 @@ def _from_bands(filter: Filter, rate_hz: float, squared: bool) -> Response:
         )
     pass_edges, ratio = _prototype(bands, shape, rate_hz)
     order = max(1, ceil(log10(stop_loss / pass_loss) / (2 * log10(ratio)) - 1e-9))
-    findings = ()
+    findings: tuple[BandFinding, ...] = ()
     for trial in range(order, MOST_ORDER + 1):
         corners = _corners(pass_edges, shape, pass_loss ** (-1 / (2 * trial)), rate_hz)
         sections = butter(trial, corners, _SCIPY_SHAPE[shape], fs=rate_hz, output="sos")
@@ -110,7 +114,7 @@ def _prototype(bands: list[Band], shape: str, rate_hz: float) -> tuple[list[floa
     """The pass edges in Hz, and how far out the stop edge lies for a low-pass prototype."""
     edges = [
         edge
-        for lower, upper in zip(bands, bands[1:], strict=False)
+        for lower, upper in itertools.pairwise(bands)
         for edge in (lower.high_hz or 0.0, upper.low_hz)
     ]
     warped = [_warped(edge, rate_hz) for edge in edges]

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from collections.abc import Sequence
 from typing import NoReturn
 
@@ -47,7 +48,7 @@ def sorted_bands(bands: Sequence[Band], filter: Filter, rate_hz: float) -> list[
                     "lower the edges",
                 )
             )
-    for lower, upper in zip(ordered, ordered[1:], strict=False):
+    for lower, upper in itertools.pairwise(ordered):
         if lower.high_hz is None or lower.high_hz >= upper.low_hz:
             problems.append(
                 Problem(

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from fractions import Fraction
 from math import ceil, log10, pi
 
@@ -34,7 +35,7 @@ def ideal_taps(
     Discrete-Time Signal Processing, section 7.5).
     """
     m = np.arange(length) - (length - 1) / 2
-    taps = gains[-1] * np.sinc(m)
+    taps: NDArray[np.float64] = gains[-1] * np.sinc(m)
     for edge_hz, below, above in zip(edges_hz, gains[:-1], gains[1:], strict=True):
         share = 2 * edge_hz / rate_hz
         taps += (below - above) * share * np.sinc(share * m)
@@ -83,7 +84,7 @@ def design_window(filter: Filter, rate_hz: Fraction, timing: Timing) -> Response
     taps = ideal_taps(length, np.array(corners), np.array(gains, float), rate) * window
     at_hz = {"high-pass": rate / 2, "band-pass": sum(corners) / 2}.get(shape, 0.0)
     m = np.arange(length) - (length - 1) / 2
-    taps /= float(taps @ np.cos(2 * pi * at_hz / rate * m))
+    taps = taps / float(taps @ np.cos(2 * pi * at_hz / rate * m))
     return TapsResponse(taps, True, (f"{name[0]} window, {length} taps",))
 
 
@@ -92,7 +93,8 @@ def kaiser_beta(attenuation_db: float) -> float:
     if attenuation_db > 50:
         return 0.1102 * (attenuation_db - 8.7)
     if attenuation_db >= 21:
-        return 0.5842 * (attenuation_db - 21) ** 0.4 + 0.07886 * (attenuation_db - 21)
+        over_db = attenuation_db - 21
+        return float(0.5842 * over_db**0.4 + 0.07886 * over_db)
     return 0.0
 
 
@@ -161,7 +163,7 @@ def design_kaiser(filter: Filter, rate_hz: Fraction, timing: Timing) -> Response
 def _steps(bands: list[Band]) -> tuple[NDArray[np.float64], list[float]]:
     """The middle and the width of the room between neighbouring bands."""
     edges, widths = [], []
-    for lower, upper in zip(bands, bands[1:], strict=False):
+    for lower, upper in itertools.pairwise(bands):
         assert lower.high_hz is not None
         edges.append((lower.high_hz + upper.low_hz) / 2)
         widths.append(upper.low_hz - lower.high_hz)

@@ -129,12 +129,11 @@ class OverlapAdd(Comparable):
 
     def _convolve(self, rows: Samples, blocks: int) -> Samples:
         """``blocks`` full blocks, laid end to end in ``rows``; their completed positions."""
-        hop, overlap, size = self.hop, self.overlap, self.transform
+        hop, size = self.hop, self.transform
         out = np.empty((self.rows, blocks * hop), self.dtype)
         together = max(1, BATCH_SAMPLES // size)
         many = min(blocks, together)
         high = max(1, together // many)
-        # Time-major input is read a cache line of channels at a time.
         work = np.zeros((min(high, self.rows), many, size), self.dtype)
         for top in range(0, self.rows, high):
             group = slice(top, min(top + high, self.rows))
@@ -201,7 +200,8 @@ class DirectSum(Comparable):
         self.history = np.array(known[:, count:])
         skip = min(count, max(0, self.emit_from - self.position))
         self.position += count
-        return out[:, skip:]
+        given: Samples = out[:, skip:]
+        return given
 
     def finish(self) -> Samples:
         """Nothing is held back."""

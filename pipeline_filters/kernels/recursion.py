@@ -15,6 +15,7 @@ from pipeline_filters.kernels.ends import Rule, extend, needed_samples
 from pipeline_filters.kernels.slab import (
     Comparable,
     Marks,
+    Samples,
     Slab,
     cut_slab,
     empty_slab,
@@ -92,8 +93,10 @@ class Recursion(Comparable):
 
     def _plain(self, missing: Marks | None) -> NDArray[np.bool_]:
         """Rows that just run on: started, settled and without a missing sample."""
-        plain = self.running & (self.unsettled == 0)
-        return plain if missing is None else plain & ~missing.any(axis=1)
+        plain: NDArray[np.bool_] = self.running & (self.unsettled == 0)
+        if missing is not None:
+            plain &= ~missing.any(axis=1)
+        return plain
 
     def _known_until(self, row: int, runs: list[tuple[int, int]], count: int) -> int:
         """Where a start at the end of what is known still lacks samples to extend."""
@@ -133,7 +136,7 @@ class Recursion(Comparable):
             self.unsettled[row] -= settling
             last = cut
 
-    def _start(self, row: int, present: NDArray[np.float64]) -> None:
+    def _start(self, row: int, present: Samples) -> None:
         """From rest, over the extension of the samples that follow."""
         state = np.zeros((self.sections.shape[0], 1, 2))
         if self.rest and self.rule not in ("zero", "blank"):
@@ -146,7 +149,7 @@ class Recursion(Comparable):
         self.fresh[row] = False
 
     def _run(
-        self, rows: slice | NDArray[np.intp], samples: NDArray[np.float64], at: int = 0
+        self, rows: slice | NDArray[np.intp], samples: Samples, at: int = 0
     ) -> NDArray[np.float64]:
         """The sections over samples of shape (rows, n), calmed on the clock's grid."""
         count = samples.shape[1]

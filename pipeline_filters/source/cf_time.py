@@ -96,13 +96,17 @@ class TimeUnits:
         if raw.dtype.kind == "f":
             whole = np.floor(raw)
             within = np.rint((raw - whole).astype(np.float64) * self.unit_ns).astype(np.int64)
-            return self._shift(whole.astype(np.int64)) + within
+            stamps: NDArray[np.int64] = self._shift(whole.astype(np.int64)) + within
+            return stamps
         return self._shift(raw.astype(np.int64))
 
     def _shift(self, whole: NDArray[np.int64]) -> NDArray[np.int64]:
         # Modulo 2^64: a product may pass the range although the sum, checked above, does not.
         epoch = np.uint64(self.epoch_ns % 2**64)
-        return (whole.view(np.uint64) * np.uint64(self.unit_ns) + epoch).view(np.int64)
+        shifted: NDArray[np.int64] = (whole.view(np.uint64) * np.uint64(self.unit_ns) + epoch).view(
+            np.int64
+        )
+        return shifted
 
 
 def _epoch_ns(text: str, calendar: str) -> int:

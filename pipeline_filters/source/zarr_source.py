@@ -192,7 +192,7 @@ class SignalReader:
                 break
         return Problem(
             f"{Path(self.path) / self.signal.variable}, {broken}",
-            f"cannot be read ({type(error).__name__}: {str(error).splitlines()[0][:120] if str(error) else ''})",
+            f"cannot be read ({type(error).__name__}: {str(error)[:120]})",
             "whole chunks, or none (an absent chunk is fill)",
             "restore the chunk from its origin, or delete it to have it read as fill",
         )
