@@ -17,10 +17,11 @@ OWN = {
     "chain": {"errors", "spec", "design", "layout"},
     "stream": {"chain", "kernels", "layout"},
     "source": {"errors", "spec", "layout"},
+    "graph": {"layout", "spans"},
     "spans": {"errors", "chain", "kernels", "layout", "stream"},
 }
 OUTSIDE = {
-    "dask": set(),
+    "dask": {"graph"},
     "yaml": {"spec"},
     "jsonschema": {"spec"},
     "zarr": {"source"},
