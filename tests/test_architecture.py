@@ -27,7 +27,7 @@ OUTSIDE = {
     "zarr": {"source"},
     "xarray": {"source"},
     "scipy.signal": {"design", "kernels"},
-    "scipy.fft": {"design", "kernels"},
+    "scipy.fft": {"kernels"},
 }
 
 
