@@ -17,15 +17,16 @@ OWN = {
     "chain": {"errors", "spec", "design", "layout"},
     "stream": {"chain", "kernels", "layout"},
     "source": {"errors", "spec", "layout"},
-    "graph": {"layout", "spans"},
+    "product": {"errors", "spec", "layout"},
+    "graph": {"errors", "layout", "spans"},
     "spans": {"errors", "chain", "kernels", "layout", "stream"},
 }
 OUTSIDE = {
     "dask": {"graph"},
     "yaml": {"spec"},
     "jsonschema": {"spec"},
-    "zarr": {"source"},
-    "xarray": {"source"},
+    "zarr": {"source", "product"},
+    "xarray": {"source", "product"},
     "scipy.signal": {"design", "kernels"},
     "scipy.fft": {"kernels"},
 }

@@ -9,7 +9,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pipeline_filters.errors import Problem, SourceError
+from pipeline_filters.source.decoding import all_finite
 from pipeline_filters.spec.model import Signal
+
+_ALLOWED = {
+    "missing": "missing samples only where the spec says what becomes of them",
+    "infinite": "finite samples, as the spec says infinite: refuse",
+}
 
 
 def screen_rows(rows: NDArray[Any], signal: Signal, place: Callable[[int, int], str]) -> None:
@@ -20,30 +26,34 @@ def screen_rows(rows: NDArray[Any], signal: Signal, place: Callable[[int, int], 
         place: names the sample at (row, column), for people.
 
     Raises:
-        SourceError: the first such sample of each kind, and how many there are here.
+        SourceError: the earliest such sample of each kind, and how many there are here.
     """
-    if rows.dtype.kind != "f":
+    refused = [
+        (name, test)
+        for name, policy, test in (
+            ("missing", signal.missing.policy, np.isnan),
+            ("infinite", signal.infinite, np.isinf),
+        )
+        if policy == "refuse"
+    ]
+    if not refused or rows.dtype.kind != "f" or all_finite(rows):
         return
-    with np.errstate(all="ignore"):
-        if np.isfinite(rows.sum()):
-            return
     problems = []
-    for policy, name, wrong in (
-        (signal.missing.policy, "missing", np.isnan(rows)),
-        (signal.infinite, "infinite", np.isinf(rows)),
-    ):
+    for name, test in refused:
+        wrong = test(rows)
         count = int(np.count_nonzero(wrong))
-        if policy != "refuse" or not count:
+        if not count:
             continue
         column = int(wrong.any(axis=0).argmax())
         row = int(wrong[:, column].argmax())
-        more = f" (and {count - 1} more nearby)" if count > 1 else ""
+        article = "a missing" if name == "missing" else "an infinite"
+        more = f" (and {count - 1} more in the samples read with it)" if count > 1 else ""
         remedy = "missing: spread or bridge" if name == "missing" else "infinite: missing"
         problems.append(
             Problem(
                 place(row, column),
-                f"{'a missing' if name == 'missing' else 'an infinite'} sample{more}",
-                f"the spec says {name}: refuse",
+                f"{article} sample{more}",
+                _ALLOWED[name],
                 f"mend the source, or state {remedy} for signal {signal.name}",
             )
         )

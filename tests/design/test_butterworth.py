@@ -202,6 +202,18 @@ def test_several_bands_of_one_kind_all_count():
     assert order_of(strict) > order_of(loose)
 
 
+def test_the_stricter_of_two_pass_bands_sets_the_corners():
+    # Both pass edges stand at the prototype's 1, so the looser band changes nothing.
+    def stop(upper_db: float) -> SectionsResponse:
+        return by_bands(
+            Band(0, 100, 1, 0.5, True),
+            Band(150, 200, 0, -30, True),
+            Band(260, None, 1, upper_db, True),
+        )
+
+    np.testing.assert_array_equal(stop(3).sections, stop(0.5).sections)
+
+
 def test_order_and_corners_under_zero_phase_say_what_they_read():
     response = by_order(4, "low-pass", 50, timing="zero-phase")
     assert any("-6.02 dB at its corners" in note for note in response.notes)

@@ -64,7 +64,7 @@ def test_clock_numbers_round_half_to_even():
 def test_a_jump_is_refused_or_splits(tmp_path):
     stamps = np.arange(200) + np.where(np.arange(200) >= 120, 37_000, 0)
     path = stored(tmp_path / "s.zarr", np.zeros((200, 2), "f4"), stamps)
-    with pytest.raises(SourceError, match=r"sample 120, 2026-03-01T00:00:37.12: jumps"):
+    with pytest.raises(SourceError, match=r"sample 120, 2026-03-01T00:00:37.12: the axis jumps"):
         open_zarr_source(path, {"plate": PLATE}).axis("plate")
     axis = open_zarr_source(path, {"plate": replace(PLATE, breaks="split")}).axis("plate")
     assert axis.starts.tolist() == [0, 120]

@@ -1,0 +1,176 @@
+"""A source in an xarray Dataset: the arrays themselves, for use inside the user's own graph."""
+
+from __future__ import annotations
+
+from collections.abc import Hashable, Mapping
+from dataclasses import dataclass
+from fractions import Fraction
+from typing import Any
+
+import numpy as np
+import xarray as xr
+from numpy.typing import NDArray
+
+from pipeline_filters.errors import Problem, SourceError
+from pipeline_filters.source.axis_scan import READ_SAMPLES
+from pipeline_filters.source.cf_attributes import MARKERS
+from pipeline_filters.source.cf_time import TimeUnitError, TimeUnits
+from pipeline_filters.source.fitting import Fit, fit_all
+from pipeline_filters.source.offers import Offer
+from pipeline_filters.source.readers import SignalReader, Source
+from pipeline_filters.spec.model import Signal
+
+__all__ = ["DatasetReader", "DatasetStamps", "open_dataset_source"]
+
+Array = NDArray[Any]
+
+_WHERE = "dataset"
+_PACKING = ("scale_factor", "add_offset")
+_RANGE = ("valid_min", "valid_max", "valid_range")
+
+
+class DatasetStamps:
+    """A time coordinate of a Dataset."""
+
+    def __init__(self, variable: xr.Variable, name: str, units: TimeUnits) -> None:
+        self.variable = variable
+        self.name = name
+        self.units = units
+        chunks = variable.chunks
+        self.chunk_samples = max(chunks[0]) if chunks else READ_SAMPLES
+
+    def read(self, start: int, stop: int) -> Array:
+        """Raw stamps of samples [start, stop); datetimes where xarray has decoded them."""
+        return np.asarray(self.variable[start:stop].values)
+
+    def resolution_ns(self, step_ns: Fraction) -> Fraction:
+        """How coarse the stamps are, beside a step of ``step_ns``: as they were stored.
+
+        xarray turns stamps into datetimes, finer than what they came from; the encoding tells.
+        """
+        last = self.variable.shape[0] - 1
+        ends = np.concatenate([self.read(0, 1), self.read(last, last + 1)])
+        own = self.units.resolution_ns(ends, step_ns)
+        stored, dtype = self.variable.encoding.get("units"), self.variable.encoding.get("dtype")
+        if ends.dtype.kind not in "mM" or not isinstance(stored, str) or dtype is None:
+            return own
+        try:
+            calendar = str(self.variable.encoding.get("calendar", "standard"))
+            units = TimeUnits.parse(stored, calendar)
+            counts = (self.units.to_ns(ends) - float(units.epoch_ns)) / units.unit_ns
+        except TimeUnitError:
+            return own
+        return max(own, units.resolution_ns(counts.astype(dtype), step_ns))
+
+
+@dataclass(frozen=True, eq=False)
+class DatasetReader(SignalReader):
+    """One signal of a Dataset.
+
+    Attributes:
+        variable: of the kept channels; its data is loaded when it is asked for.
+    """
+
+    variable: xr.Variable
+
+    @property
+    def array(self) -> Any:
+        """All undecoded samples of the kept channels: the dask array, or a numpy array."""
+        return self.variable.data
+
+    def read(self, start: int, stop: int, box: tuple[slice, ...]) -> Array:
+        """Undecoded samples [start, stop) of a box of kept channels, in the source's order."""
+        index = list(box)
+        index.insert(self.time_dim, slice(start, stop))
+        return np.asarray(self.variable[tuple(index)].values)
+
+
+class _Dataset:
+    """What a Dataset offers."""
+
+    where = _WHERE
+
+    def __init__(self, dataset: xr.Dataset, samples: frozenset[str]) -> None:
+        self._dataset = dataset
+        self._samples = samples  # the variables that are filtered
+
+    def find(self, name: str) -> Offer | None:
+        if name not in self._dataset.variables:
+            return None
+        variable = self._dataset.variables[name]
+        if name in self._samples:
+            _refuse_unpacked(name, variable)
+        return Offer(
+            name,
+            tuple(str(dim) for dim in variable.dims),
+            variable.shape,
+            variable.dtype,
+            variable.attrs,
+            lambda: np.asarray(variable.values),
+            variable,
+        )
+
+    def names(self) -> list[str]:
+        return sorted(str(name) for name in self._dataset.variables)
+
+    def shared_coordinates(self) -> str:
+        return " ".join(str(name) for name in self._dataset.coords)
+
+
+def _refuse_unpacked(name: str, variable: xr.Variable) -> None:
+    """Refuses values that xarray has formed from others, with its own arithmetic."""
+    encoding: Mapping[Hashable, Any] = variable.encoding
+    stored = encoding.get("dtype")
+    was_integer = stored is not None and np.dtype(stored).kind in "iu"
+    telling = [key for key in _PACKING if key in encoding]
+    if was_integer and variable.dtype.kind == "f":
+        telling += [key for key in (*MARKERS, *_RANGE) if key in {*encoding, *variable.attrs}]
+    if telling:
+        raise SourceError(
+            Problem(
+                f"{_WHERE}, variable {name}",
+                f"values that xarray has decoded ({', '.join(telling)})",
+                "samples as they are stored: they are decoded here, in one way",
+                "open the source with mask_and_scale=False",
+            )
+        )
+
+
+def open_dataset_source(dataset: xr.Dataset, signals: Mapping[str, Signal]) -> Source:
+    """Fits a Dataset to a spec's signals; nothing is read but coordinates.
+
+    Args:
+        dataset: with samples as they are stored (``mask_and_scale=False``), or with floats
+            that need no scaling. Data given as dask arrays stays lazy.
+
+    Raises:
+        SourceError: with every problem of every signal.
+    """
+    samples = frozenset(signal.variable for signal in signals.values())
+    fits = fit_all(_Dataset(dataset, samples), signals)
+    return Source(_WHERE, {name: _reader(fit) for name, fit in fits.items()})
+
+
+def _reader(fit: Fit) -> DatasetReader:
+    variable: xr.Variable = fit.offer.array
+    kept = {
+        dim: list(at)
+        for dim, at in zip(
+            (dim for place, dim in enumerate(fit.dims) if place != fit.time_dim),
+            fit.keep,
+            strict=True,
+        )
+        if at is not None
+    }
+    if kept:
+        variable = variable.isel(kept)
+    stamps = None
+    if fit.time_offer is not None and fit.time_units is not None:
+        stamps = DatasetStamps(fit.time_offer.array, fit.time_offer.name, fit.time_units)
+    return DatasetReader(
+        **fit.reader_facts(),
+        stamps=stamps,
+        chunks=tuple(map(max, variable.chunks)) if variable.chunks else variable.shape,
+        shards=None,
+        variable=variable,
+    )
