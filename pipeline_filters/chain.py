@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from collections.abc import Collection, Mapping, Sequence
+from dataclasses import dataclass, replace
 from fractions import Fraction
 from math import ceil, floor, log2
 from typing import Any
@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 
 from pipeline_filters.design.compliance import BandFinding, check_bands
 from pipeline_filters.design.contract import Response, SectionsResponse, TapsResponse
-from pipeline_filters.design.designing import design_filter
+from pipeline_filters.design.designing import checked_filter
 from pipeline_filters.design.impulse import settling_samples
 from pipeline_filters.design.merging import AT_REST, convolve_taps, two_sided
 from pipeline_filters.errors import Problem, SpecError, ToleranceError
@@ -66,7 +66,13 @@ Stage = TapsStage | RecursionStage
 
 @dataclass(frozen=True, eq=False)
 class Chain:
-    """All that a result's numbers depend on besides the samples."""
+    """All that a result's numbers depend on besides the samples.
+
+    Attributes:
+        notes: facts about the designs, for people.
+        findings: what was found in the bands that the result states.
+        filter_findings: what was found in the bands of each filter.
+    """
 
     stages: tuple[Stage, ...]
     rate_hz: Fraction
@@ -77,6 +83,7 @@ class Chain:
     delay_samples: Fraction | None
     notes: tuple[str, ...] = ()
     findings: tuple[BandFinding, ...] = ()
+    filter_findings: tuple[tuple[str, tuple[BandFinding, ...]], ...] = ()
 
     @property
     def dtype(self) -> np.dtype[Any]:
@@ -122,11 +129,18 @@ class Chain:
 
     @property
     def hold_back(self) -> int:
-        """Samples after a result's own that must have come before it is published."""
+        """Samples after a result's own that must have come before it is published, at most.
+
+        Where ends are mirrored, a start waits for the samples that its extension mirrors.
+        """
+        mirrored = self.ends in ("even", "odd")
         held = self.look_ahead
         for stage in self.stages:
             if isinstance(stage, TapsStage):
-                held += stage.lead + stage.hop - 1
+                before = stage.taps.size - 1 - stage.lead
+                held += max(stage.lead + stage.hop - 1, before if mirrored else 0)
+            else:
+                held += stage.rest if mirrored else 0
         return held
 
     @property
@@ -198,33 +212,41 @@ class Chain:
         )
 
 
-def design_chains(spec: Spec) -> dict[str, Chain]:
-    """Designs every result's chain and checks what it promises.
+def design_chains(spec: Spec, names: Collection[str] | None = None) -> dict[str, Chain]:
+    """Designs the chains of results and checks what they promise.
+
+    Args:
+        names: of the results; all where None.
 
     Raises:
         SpecError, ToleranceError: with every problem of every result.
     """
-    designed: dict[tuple[str, Fraction, bool], Response] = {}
+    designed: dict[tuple[str, Fraction, bool], tuple[Response, tuple[BandFinding, ...]]] = {}
     chains: dict[str, Chain] = {}
     refused: list[Problem] = []
     missed: list[Problem] = []
     for name, result in spec.results.items():
+        if names is not None and name not in names:
+            continue
         rate_hz = spec.signals[result.signal].rate_hz
-        responses = []
+        parts = []
         for filter_name in result.through:
             key = filter_name, rate_hz, result.timing == "zero-phase"
             try:
                 if key not in designed:
-                    designed[key] = design_filter(spec.filters[filter_name], rate_hz, result.timing)
-                responses.append(designed[key])
+                    filter = spec.filters[filter_name]
+                    designed[key] = checked_filter(filter, rate_hz, result.timing)
+                parts.append(designed[key])
             except SpecError as error:
                 refused += error.problems
             except ToleranceError as error:
                 missed += error.problems
-        if len(responses) < len(result.through):
+        if len(parts) < len(result.through):
             continue
         try:
-            chains[name] = build_chain(spec, result, responses)
+            chain = build_chain(spec, result, [response for response, _ in parts])
+            by_filter = zip(result.through, (found for _, found in parts), strict=True)
+            chains[name] = replace(chain, filter_findings=tuple(by_filter))
         except SpecError as error:
             refused += error.problems
         except ToleranceError as error:

@@ -12,6 +12,7 @@ from dataclasses import dataclass
 from itertools import pairwise
 from itertools import product as all_pairs
 from math import ceil, prod
+from typing import TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -61,6 +62,14 @@ class Stretches:
             low, high = max(start, stretch.start), min(stop, stretch.stop)
             if low < high:
                 yield stretch, low - stretch.start, high - stretch.start
+
+    def part(self, start: int, stop: int) -> Stretches:
+        """Those that hold samples of [start, stop), whole."""
+        first = max(0, int(np.searchsorted(self.starts, start, side="right")) - 1)
+        last = int(np.searchsorted(self.starts, stop, side="left"))
+        return Stretches(
+            self.starts[first:last], self.lengths[first:last], self.numbers[first:last]
+        )
 
 
 @dataclass(frozen=True)
@@ -202,7 +211,10 @@ class Span:
         )
 
 
-def without(values: Sequence[int], dim: int) -> tuple[int, ...]:
+T = TypeVar("T")
+
+
+def without(values: Sequence[T], dim: int) -> tuple[T, ...]:
     """The values of all dimensions but one."""
     return tuple(value for index, value in enumerate(values) if index != dim)
 
@@ -213,18 +225,24 @@ def box_rows(box: Box) -> int:
 
 
 def plan_spans(
-    grid: UnitGrid, boxes: Sequence[Box], *, span_samples: int, reach_samples: int
+    grid: UnitGrid,
+    boxes: Sequence[Box],
+    *,
+    span_samples: int,
+    reach_samples: int,
+    chunk_samples: int = 1,
 ) -> list[Span]:
     """Cuts every box into spans of about ``span_samples`` values.
 
     A span of a chain that is warmed up over its reach is also at least 16 reaches long, so
-    that warming up stays a small share of the work. The last span takes what is left over,
-    so that no sliver remains.
+    that warming up stays a small share of the work; and at least a chunk of the source, which
+    would be decoded by several otherwise. What is left over is shared out, so that no sliver
+    remains.
     """
     spans = []
     total = grid.counts[grid.time_dim]
     for box in boxes:
-        samples = max(span_samples // max(1, box_rows(box)), 16 * reach_samples, 1)
+        samples = max(span_samples // max(1, box_rows(box)), 16 * reach_samples, chunk_samples)
         units = max(1, ceil(samples / grid.time_unit))
         pieces = max(1, total // units)
         edges = [round(index * total / pieces) for index in range(pieces + 1)]

@@ -8,6 +8,7 @@ from __future__ import annotations
 import time
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass, field
+from functools import partial
 from typing import Any, Protocol
 
 import numpy as np
@@ -16,7 +17,7 @@ from numpy.typing import NDArray
 from pipeline_filters.chain import Chain
 from pipeline_filters.errors import FilterStageError, Problem, SourceError
 from pipeline_filters.kernels.overlap_add import copy_rows
-from pipeline_filters.kernels.slab import Comparable, Slab, all_finite
+from pipeline_filters.kernels.slab import Comparable, Slab, all_finite, cut_slab
 from pipeline_filters.layout import Box, Span, Stretches, UnitGrid, box_rows
 from pipeline_filters.stream import Stream
 
@@ -29,7 +30,9 @@ PIECE_SAMPLES = 1 << 19
 class Reader(Protocol):
     """Where samples come from: paths and numbers only, so that it may be sent anywhere."""
 
-    time_dim: int
+    @property
+    def time_dim(self) -> int:
+        """Which dimension is time."""
 
     def read(self, start: int, stop: int, box: Box) -> Array:
         """Undecoded samples [start, stop) of a group of channels, source dimension order."""
@@ -62,7 +65,15 @@ class Writer(Protocol):
 
 @dataclass(frozen=True, eq=False)
 class Job:
-    """What all spans of one result share; sent once to every worker."""
+    """What all spans of one result share; sent once to every worker.
+
+    Attributes:
+        chunk_samples: samples along time that the source decodes together.
+        dtype: of the results, as kept.
+        input_digest: of undecoded samples of one unit and their stamps.
+        output_digest: of the results of one unit.
+        stamps: the stamps of results [start, stop) from those of the samples there.
+    """
 
     result: str
     chain: Chain
@@ -72,7 +83,8 @@ class Job:
     stretches: Stretches
     chunk_samples: int
     dtype: np.dtype[Any]
-    digest: Callable[[Array, NDArray[np.int64] | None], bytes]
+    input_digest: Callable[[Array, NDArray[np.int64] | None], bytes]
+    output_digest: Callable[[Array], bytes]
     stamps: Callable[[int, int, NDArray[np.int64]], NDArray[np.int64]]
 
 
@@ -154,14 +166,19 @@ class _Work:
         return self.carry
 
     def _pushed(self, stream: Stream, origin: int) -> Iterator[Slab]:
-        """Reads up to the end of a source chunk, or of the stretch, and pushes it."""
+        """Reads up to the end of a source chunk, or of the stretch, and pushes it.
+
+        Small chunks are read several at a time, as each read has a cost of its own.
+        """
         job = self.job
         start = origin + stream.next_input
-        chunk = start // job.chunk_samples
-        stop = min((chunk + 1) * job.chunk_samples, origin + stream.length)
+        unit = job.chunk_samples * max(1, PIECE_SAMPLES // (self.rows * job.chunk_samples))
+        stop = min((start // unit + 1) * unit, origin + stream.length)
         raw = job.reader.read(start, stop, self.box)
         self.record.samples_read += raw.size
-        self.record.chunks_decoded += 1
+        self.record.chunks_decoded += (
+            (stop - 1) // job.chunk_samples - start // job.chunk_samples + 1
+        )
         self._keep_raw(start, raw)
         rows = job.reader.rows(raw)
         size = max(4096, PIECE_SAMPLES // self.rows)
@@ -206,7 +223,7 @@ class _Work:
         stamps = self.job.reader.stamps_ns(low, high)
         time_unit = low // self.job.grid.time_unit
         self.input_digests[time_unit] = {
-            place: self.job.digest(_of_unit(whole, self.box, channels, dim), stamps)
+            place: self.job.input_digest(_of_unit(whole, self.box, channels, dim), stamps)
             for place, channels in self.job.grid.units_in(self.box, time_unit)
         }
         if stamps is not None and all(part.start == 0 for part in self.box):
@@ -247,41 +264,13 @@ class _Work:
 
     def _lay(self, slab: Slab, done: int, count: int, at: int) -> None:
         assert self.buffer is not None
-        values = slab.values[:, done : done + count]
-        missing = None if slab.missing is None else slab.missing[:, done : done + count]
+        part = cut_slab(slab, done, done + count)
         target = np.moveaxis(self.buffer, self.job.grid.time_dim, -1)[..., at : at + count]
-        try:
-            with np.errstate(over="raise", invalid="raise"):
-                if target.ndim == 2:
-                    copy_rows(target, values)
-                else:
-                    target[...] = values.reshape(target.shape)
-        except FloatingPointError:
-            self._refuse_overflow(values, missing)
-        if missing is not None:
-            target[missing.reshape(target.shape)] = np.nan
-            self.record.samples_missing += int(np.count_nonzero(missing))
-        if not all_finite(values):
-            self._refuse_overflow(values, missing)
+        place = partial(self._place, self.next_out)
+        self.record.samples_missing += keep_results(target, part, self.job.result, place)
 
-    def _refuse_overflow(self, values: Array, missing: Array | None) -> None:
-        """Refuses results that are not numbers of the kept type although present."""
-        with np.errstate(all="ignore"):
-            wrong = ~np.isfinite(values.astype(self.job.dtype))
-        if missing is not None:
-            wrong &= ~missing
-        if not wrong.any():
-            return
-        row, column = (int(place[0]) for place in np.nonzero(wrong))
-        raise SourceError(
-            Problem(
-                self.job.reader.place(self.next_out + column, row, self.box),
-                f"result {self.job.result} is too large for {self.job.dtype} here",
-                f"magnitudes up to {np.finfo(self.job.dtype).max:.3g}",
-                "declare the offending values as missing in the source (missing_value or "
-                "valid_range), or state keep_as: float64",
-            )
-        )
+    def _place(self, start: int, row: int, column: int) -> str:
+        return self.job.reader.place(start + column, row, self.box)
 
     def _write(self, low: int, high: int) -> None:
         assert self.buffer is not None
@@ -291,9 +280,61 @@ class _Work:
         inputs = self.input_digests.pop(time_unit)
         for place, channels in job.grid.units_in(self.box, time_unit):
             part = _of_unit(self.buffer, self.box, channels, job.grid.time_dim)
-            self.record.units.append((place, inputs[place], job.digest(part, None)))
+            self.record.units.append((place, inputs[place], job.output_digest(part)))
         self.record.samples_written += self.buffer.size
         self.buffer = None
+
+
+def keep_results(target: Array, slab: Slab, result: str, place: Callable[[int, int], str]) -> int:
+    """Lays results into an array of the kept type, NaN where missing.
+
+    Args:
+        target: shape (..., n), whose leading dimensions are the rows of ``slab``.
+        place: names the sample at (row, column), for people.
+
+    Returns:
+        how many are missing.
+
+    Raises:
+        SourceError: results that are no finite numbers of the kept type although present.
+    """
+    values, missing = slab.values, slab.missing
+    try:
+        with np.errstate(over="raise", invalid="raise"):
+            if target.ndim == 2:
+                copy_rows(target, values)
+            else:
+                target[...] = values.reshape(target.shape)
+        overflow = not all_finite(values)
+    except FloatingPointError:
+        overflow = True
+    if overflow:
+        _refuse_overflow(slab, target.dtype, result, place)
+    if missing is None:
+        return 0
+    target[missing.reshape(target.shape)] = np.nan
+    return int(np.count_nonzero(missing))
+
+
+def _refuse_overflow(
+    slab: Slab, dtype: np.dtype[Any], result: str, place: Callable[[int, int], str]
+) -> None:
+    with np.errstate(all="ignore"):
+        wrong = ~np.isfinite(slab.values.astype(dtype))
+    if slab.missing is not None:
+        wrong &= ~slab.missing
+    if not wrong.any():
+        return
+    row, column = (int(at[0]) for at in np.nonzero(wrong))
+    raise SourceError(
+        Problem(
+            place(row, column),
+            f"result {result} is too large for {dtype} here",
+            f"magnitudes up to {np.finfo(dtype).max:.3g}",
+            "declare the offending values as missing in the source (missing_value or "
+            "valid_range), or state keep_as: float64",
+        )
+    )
 
 
 def _cut(raw: Array, dim: int, start: int, stop: int) -> Array:

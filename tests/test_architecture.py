@@ -17,6 +17,12 @@ OWN = {
     "chain": {"errors", "spec", "design", "layout"},
     "stream": {"chain", "kernels", "layout"},
     "source": {"errors", "spec", "layout"},
+    "stage": {
+        *("errors", "spec", "design", "layout", "kernels", "chain", "stream"),
+        *("source", "product", "graph", "spans"),
+    },
+    "cli": {"errors", "spec", "stage", "demo"},
+    "demo": {"errors", "spec", "stage", "product"},
     "product": {"errors", "spec", "layout"},
     "graph": {"errors", "layout", "spans"},
     "spans": {"errors", "chain", "kernels", "layout", "stream"},
@@ -25,8 +31,8 @@ OUTSIDE = {
     "dask": {"graph"},
     "yaml": {"spec"},
     "jsonschema": {"spec"},
-    "zarr": {"source", "product"},
-    "xarray": {"source", "product"},
+    "zarr": {"source", "product", "demo"},
+    "xarray": {"source", "product", "graph"},
     "scipy.signal": {"design", "kernels"},
     "scipy.fft": {"kernels"},
 }

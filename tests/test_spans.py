@@ -15,7 +15,7 @@ import zarr
 from pipeline_filters.chain import Chain, build_chain
 from pipeline_filters.design.designing import design_filter
 from pipeline_filters.errors import SourceError
-from pipeline_filters.graph import run_graph
+from pipeline_filters.graph.span_tasks import run_graph
 from pipeline_filters.layout import Stretches, UnitGrid, plan_spans
 from pipeline_filters.source.zarr_source import open_zarr_source
 from pipeline_filters.spans import Job, SpanRecord, run_span
@@ -40,7 +40,7 @@ class MemoryWriter:
         self.stamps_ns[start:stop] = stamps_ns
 
 
-def digest(values, stamps_ns):
+def digest(values, stamps_ns=None):
     return hashlib.sha256(np.ascontiguousarray(values).tobytes()).digest()
 
 
@@ -97,6 +97,7 @@ def run(path, the_chain, unit, span_samples, get=dask.get):
         stretches,
         reader.chunk_samples,
         np.dtype(np.float64),
+        digest,
         digest,
         lambda start, stop, stamps: stamps,
     )
@@ -155,6 +156,7 @@ def test_a_result_too_large_for_its_type_is_refused_with_its_place(tmp_path):
         Stretches(axis.starts, axis.lengths, axis.numbers),
         500,
         np.dtype(np.float32),
+        digest,
         digest,
         lambda start, stop, stamps: stamps,
     )

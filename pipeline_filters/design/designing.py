@@ -5,7 +5,7 @@ from __future__ import annotations
 from difflib import get_close_matches
 from fractions import Fraction
 
-from pipeline_filters.design.compliance import check_bands
+from pipeline_filters.design.compliance import BandFinding, check_bands
 from pipeline_filters.design.contract import Response
 from pipeline_filters.design.registry import METHODS
 from pipeline_filters.design.verdicts import unmet
@@ -14,7 +14,18 @@ from pipeline_filters.spec.model import Filter, Timing
 
 
 def design_filter(filter: Filter, rate_hz: Fraction, timing: Timing) -> Response:
-    """The response of a filter at a rate, checked against the bands it states.
+    """The response alone of `checked_filter`.
+
+    Raises:
+        SpecError, ToleranceError: as there.
+    """
+    return checked_filter(filter, rate_hz, timing)[0]
+
+
+def checked_filter(
+    filter: Filter, rate_hz: Fraction, timing: Timing
+) -> tuple[Response, tuple[BandFinding, ...]]:
+    """The response of a filter at a rate, and what it reaches in the bands it states.
 
     Under zero-phase timing the squared magnitude is judged, and tolerance-driven designs
     aim at it: at the root of each gain, and half of each tolerance in dB.
@@ -49,4 +60,4 @@ def design_filter(filter: Filter, rate_hz: Fraction, timing: Timing) -> Response
             squared=squared,
             remedy="change the filter's settings, or the claim that the band makes",
         )
-    return response
+    return response, findings

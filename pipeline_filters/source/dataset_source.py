@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Hashable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from fractions import Fraction
 from typing import Any
 
@@ -12,6 +12,7 @@ import xarray as xr
 from numpy.typing import NDArray
 
 from pipeline_filters.errors import Problem, SourceError
+from pipeline_filters.source.axis import Axis
 from pipeline_filters.source.axis_scan import READ_SAMPLES
 from pipeline_filters.source.cf_attributes import MARKERS
 from pipeline_filters.source.cf_time import TimeUnitError, TimeUnits
@@ -83,6 +84,31 @@ class DatasetReader(SignalReader):
         index = list(box)
         index.insert(self.time_dim, slice(start, stop))
         return np.asarray(self.variable[tuple(index)].values)
+
+
+def without_samples(reader: DatasetReader, axis: Axis) -> DatasetReader:
+    """A reader that decodes, screens and names samples, but holds none: small to send."""
+    stamps = None if axis.kind == "counted" else AxisStamps(axis, TimeUnits(axis.kind, 1, 0))
+    return replace(reader, variable=xr.Variable((), 0), stamps=stamps, coords={})
+
+
+@dataclass(frozen=True, eq=False)
+class AxisStamps:
+    """Stamps as a checked axis has them, in nanoseconds."""
+
+    axis: Axis
+    units: TimeUnits
+    name: str = "time"
+    chunk_samples: int = READ_SAMPLES
+
+    def read(self, start: int, stop: int) -> Array:
+        """Stamps of samples [start, stop)."""
+        return self.axis.stamps_at(start, stop, 0)
+
+    def resolution_ns(self, step_ns: Fraction) -> Fraction:
+        """They are exact."""
+        del step_ns
+        return Fraction(0)
 
 
 class _Dataset:

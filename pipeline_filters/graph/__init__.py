@@ -1,0 +1,8 @@
+"""Dask: spans as tasks, the workers that run them, and lazy arrays for xarray users.
+
+| module | what it is |
+|---|---|
+| span_tasks | one task a span, carries handed on within a group of channels |
+| workers | this process, or several beside it |
+| lazy | results as dask arrays with the user's chunks |
+"""

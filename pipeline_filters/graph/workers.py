@@ -1,0 +1,82 @@
+"""Who runs the tasks: this process alone, or worker processes beside it.
+
+Processes, since in threads small transforms lose half of a second core to the interpreter's
+lock. The jobs are sent to each worker once, as it starts; a task is a name and a few numbers.
+"""
+
+from __future__ import annotations
+
+import multiprocessing
+import os
+import signal
+import threading
+from collections.abc import Callable, Iterator
+from concurrent.futures import ProcessPoolExecutor
+from concurrent.futures.process import BrokenProcessPool
+from contextlib import contextmanager
+from functools import partial
+from typing import Any
+
+from dask import multiprocessing as dask_processes
+from dask.local import get_sync
+
+from pipeline_filters.errors import Problem, StoppedEarlyError
+from pipeline_filters.graph.span_tasks import adopt
+from pipeline_filters.spans import Jobs
+
+# Tiny spans are sent in batches, as each message has a cost; long ones one by one.
+_BATCH = 16
+_LONG_FROM = 64
+
+
+@contextmanager
+def schedulers(jobs: Jobs, workers: int, tasks: int) -> Iterator[Callable[..., Any]]:
+    """A Dask ``get`` over ``workers`` processes; over none but this one where that is 1.
+
+    Args:
+        tasks: how many there are to be run.
+
+    Raises:
+        StoppedEarlyError: a worker process has died; on leaving.
+    """
+    if workers == 1:
+        adopt(jobs)
+        yield get_sync
+        return
+    context = multiprocessing.get_context("forkserver")
+    context.set_forkserver_preload([__name__])
+    pool = ProcessPoolExecutor(workers, context, initializer=_begin, initargs=(jobs,))
+    try:
+        yield partial(
+            dask_processes.get,
+            pool=pool,
+            num_workers=workers,
+            optimize_graph=False,
+            chunksize=1 if tasks < _LONG_FROM * workers else _BATCH,
+        )
+    except BrokenProcessPool:
+        raise StoppedEarlyError(
+            Problem(
+                "a worker process",
+                "it was ended from outside (often: out of memory)",
+                remedy="run again; with a lower --memory or fewer --workers if it happens again",
+            )
+        ) from None
+    finally:
+        pool.shutdown(wait=True, cancel_futures=True)
+
+
+def _begin(jobs: Jobs) -> None:
+    """What a worker does first."""
+    # Ctrl-C reaches every process of a terminal: the first one decides, workers end their span.
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
+    threading.Thread(target=_end_with_parent, daemon=True).start()
+    adopt(jobs)
+
+
+def _end_with_parent() -> None:
+    # A worker would wait for ever for the next task of a process that was killed.
+    parent = multiprocessing.parent_process()
+    if parent is not None:
+        parent.join()
+        os._exit(1)
