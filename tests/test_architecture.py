@@ -24,7 +24,7 @@ OWN = {
     "cli": {"errors", "spec", "stage", "demo"},
     "demo": {"errors", "spec", "stage", "product"},
     "product": {"errors", "spec", "layout"},
-    "graph": {"errors", "layout", "spans"},
+    "graph": {"errors", "layout", "kernels", "chain", "stream", "spans"},
     "spans": {"errors", "chain", "kernels", "layout", "stream"},
 }
 OUTSIDE = {
@@ -32,7 +32,7 @@ OUTSIDE = {
     "yaml": {"spec"},
     "jsonschema": {"spec"},
     "zarr": {"source", "product", "demo"},
-    "xarray": {"source", "product", "graph"},
+    "xarray": {"source", "product", "graph", "stage"},
     "scipy.signal": {"design", "kernels"},
     "scipy.fft": {"kernels"},
 }

@@ -3,9 +3,11 @@
 from __future__ import annotations
 
 import argparse
+import difflib
 import importlib
 import json
 import os
+import re
 import signal
 import sys
 from typing import Any, NoReturn
@@ -38,7 +40,13 @@ COMMANDS = ("check", "forecast", "filter", "demo")
 class _Parser(argparse.ArgumentParser):
     def error(self, message: str) -> NoReturn:
         # The same form as every other refusal.
-        raise CommandLineError(Problem("command line", message, "", f"see {self.prog} --help"))
+        remedy = f"see {self.prog} --help"
+        choice = re.match(r"argument COMMAND: invalid choice: '([^']*)'", message)
+        if choice:
+            message = f"no command {choice[1]}"
+            near = difflib.get_close_matches(choice[1], COMMANDS, n=1)
+            remedy = f"did you mean {near[0]}?" if near else f"one of {', '.join(COMMANDS)}"
+        raise CommandLineError(Problem("command line", message, "", remedy))
 
 
 def build_parser() -> argparse.ArgumentParser:
