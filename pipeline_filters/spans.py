@@ -14,7 +14,7 @@ from typing import Any, Protocol
 import numpy as np
 from numpy.typing import NDArray
 
-from pipeline_filters.chain import Chain
+from pipeline_filters.chain.model import Chain
 from pipeline_filters.errors import FilterStageError, Problem, SourceError
 from pipeline_filters.kernels.overlap_add import copy_rows
 from pipeline_filters.kernels.slab import Comparable, Slab, all_finite, cut_slab

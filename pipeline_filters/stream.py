@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from pipeline_filters.chain import Chain, RecursionStage, Stage, TapsStage
+from pipeline_filters.chain.model import Chain, RecursionStage, Stage, TapsStage
 from pipeline_filters.kernels.ends import Extension
 from pipeline_filters.kernels.missing import Bridging, Spread
 from pipeline_filters.kernels.overlap_add import DirectSum, OverlapAdd

@@ -12,7 +12,8 @@ import numpy as np
 import pytest
 import zarr
 
-from pipeline_filters.chain import Chain, build_chain
+from pipeline_filters.chain.building import build_chain
+from pipeline_filters.chain.model import Chain
 from pipeline_filters.design.designing import design_filter
 from pipeline_filters.errors import SourceError
 from pipeline_filters.graph.span_tasks import run_graph

@@ -21,7 +21,7 @@ from dask.base import tokenize
 from dask.highlevelgraph import HighLevelGraph
 from numpy.typing import NDArray
 
-from pipeline_filters.chain import Chain
+from pipeline_filters.chain.model import Chain
 from pipeline_filters.kernels.slab import Slab, cut_slab
 from pipeline_filters.layout import Box, Stretches, without
 from pipeline_filters.spans import PIECE_SAMPLES, keep_results

@@ -44,7 +44,6 @@ def schedulers(jobs: Jobs, workers: int, tasks: int) -> Iterator[Callable[..., A
         yield get_sync
         return
     context = multiprocessing.get_context("forkserver")
-    context.set_forkserver_preload([__name__])
     pool = ProcessPoolExecutor(workers, context, initializer=_begin, initargs=(jobs,))
     try:
         yield partial(

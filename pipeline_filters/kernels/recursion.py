@@ -9,7 +9,6 @@ from __future__ import annotations
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.signal import sosfilt
 
 from pipeline_filters.kernels.ends import Rule, extend, needed_samples
 from pipeline_filters.kernels.slab import (
@@ -142,7 +141,7 @@ class Recursion(Comparable):
         if self.rest and self.rule not in ("zero", "blank"):
             known = Slab(present[:, : self.rest + 1].astype(np.float64))
             before = extend(known, self.rule, self.rest, side="left").values
-            _, state = sosfilt(self.sections, before, axis=-1, zi=state)
+            _, state = _sosfilt(self.sections, before, state)
         self.state[:, row : row + 1] = state
         self.running[row] = True
         self.unsettled[row] = 0 if self.fresh[row] else self.settle
@@ -160,12 +159,22 @@ class Recursion(Comparable):
             number = self.position + at + done
             size = min(count - done, CALM_GRID - number % CALM_GRID)
             piece = np.ascontiguousarray(samples[:, done : done + size], np.float64)
-            out[:, done : done + size], state = sosfilt(self.sections, piece, axis=-1, zi=state)
+            out[:, done : done + size], state = _sosfilt(self.sections, piece, state)
             done += size
             if (number + size) % CALM_GRID == 0:
                 state[np.abs(state) < CALM_BELOW] = 0
         self.state[:, rows] = state
         return out
+
+
+def _sosfilt(
+    sections: NDArray[np.float64], samples: Samples, state: NDArray[np.float64]
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    # Half a second to load, which chains of taps alone never need.
+    from scipy.signal import sosfilt
+
+    out, after = sosfilt(sections, samples, axis=-1, zi=state)
+    return out, after
 
 
 def _present_runs(missing: Marks | None, row: int, count: int) -> list[tuple[int, int]]:

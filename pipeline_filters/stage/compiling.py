@@ -11,7 +11,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from pipeline_filters.chain import Chain, design_chains
+from pipeline_filters.chain.building import design_chains
+from pipeline_filters.chain.model import Chain
 from pipeline_filters.errors import Problem, SpecError
 from pipeline_filters.layout import Box, Span, Stretches, UnitGrid, box_rows, plan_spans, without
 from pipeline_filters.product.digest import unit_digest

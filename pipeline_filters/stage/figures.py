@@ -7,7 +7,7 @@ from fractions import Fraction
 from math import prod
 from typing import TYPE_CHECKING, Any
 
-from pipeline_filters.chain import Chain, TapsStage
+from pipeline_filters.chain.model import Chain, TapsStage
 from pipeline_filters.design.compliance import BandFinding
 from pipeline_filters.layout import Span, decodings, without
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterable
 from math import prod
 
-from pipeline_filters.chain import TapsStage
+from pipeline_filters.chain.model import TapsStage
 from pipeline_filters.errors import BudgetError, Problem
 from pipeline_filters.kernels.overlap_add import BATCH_SAMPLES
 from pipeline_filters.layout import without

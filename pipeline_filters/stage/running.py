@@ -20,6 +20,7 @@ from pipeline_filters.product.surroundings import surroundings
 from pipeline_filters.source.zarr_source import open_zarr_source
 from pipeline_filters.spans import SpanRecord, peak_bytes
 from pipeline_filters.spec.model import Spec
+from pipeline_filters.stage.ahead import start_workers_early
 from pipeline_filters.stage.compiling import (
     CompiledResult,
     chains_of,
@@ -72,6 +73,7 @@ def run(
         FilterStageError: what is refused; ``exit_code`` tells the kind.
     """
     began = time.perf_counter()
+    start_workers_early(workers)
     spec = as_spec(spec)
     state = Product.inspect(product)
     chains, stored = chains_of(spec, product, state)

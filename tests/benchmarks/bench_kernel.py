@@ -16,7 +16,7 @@ from fractions import Fraction
 import numpy as np
 from scipy.signal import oaconvolve
 
-from pipeline_filters.chain import block_rule
+from pipeline_filters.chain.blocks import block_rule
 from pipeline_filters.kernels.overlap_add import OverlapAdd
 from pipeline_filters.spec.model import Blocks
 

@@ -12,7 +12,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy.signal import butter
 
-from pipeline_filters.chain import Chain, RecursionStage, TapsStage
+from pipeline_filters.chain.model import Chain, RecursionStage, TapsStage
 from pipeline_filters.kernels.missing import mark_with_nan
 from pipeline_filters.layout import Stretch
 from pipeline_filters.stream import Stream
