@@ -11,7 +11,6 @@ from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.signal import butter
 
 from pipeline_filters.design.compliance import BandFinding, check_bands
 from pipeline_filters.design.contract import SectionsResponse
@@ -90,6 +89,8 @@ def _sections(
     corners_hz: Sequence[float],
     rate_hz: Fraction,
 ) -> NDArray[np.float64]:
+    from scipy.signal import butter  # long to load, so only where it is asked for
+
     edges = corners_hz[0] if len(corners_hz) == 1 else list(corners_hz)
     made = butter(order, edges, _KINDS[shape], output="sos", fs=float(rate_hz))
     sections = np.asarray(made, np.float64)

@@ -6,7 +6,6 @@ from math import ceil, log
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.signal import sosfilt
 
 from pipeline_filters.errors import Problem, SpecError
 
@@ -100,6 +99,8 @@ def _computed(
     fall at least as fast as between the last two (a repeated pole falls slower at first,
     never later on), which bounds all the rest by a geometric series.
     """
+    from scipy.signal import sosfilt  # long to load, so only where it is asked for
+
     refuse_restless(sections, rest, where, most)
     radius, pole = pole_radius(sections)
     length = 64 if radius == 0 else max(64, ceil(-8 / log(radius)))

@@ -7,7 +7,6 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.signal import remez
 
 from pipeline_filters.design.compliance import POINTS_PER_TAP, amplitude_at
 from pipeline_filters.design.extremes import local_maxima
@@ -84,6 +83,8 @@ def exchange_taps(
     Returns:
         shape (length,), symmetric; None where the exchange does not converge.
     """
+    from scipy.signal import remez  # long to load, so only where it is asked for
+
     weights = np.array([1 / aim.half_width for aim in aims])
     try:
         taps = remez(

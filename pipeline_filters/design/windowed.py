@@ -13,7 +13,6 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.signal import get_window, windows
 
 from pipeline_filters.design.compliance import BandFinding, check_bands, taps_magnitude
 from pipeline_filters.design.contract import TapsResponse
@@ -128,6 +127,8 @@ def _named(window: tuple[object, ...]) -> str:
 
 
 def _window(filter: Filter, window: tuple[object, ...], length: int) -> NDArray[np.float64]:
+    from scipy.signal import get_window, windows  # long to load, so only where it is asked for
+
     name = str(window[0]) if window else ""
     # The types of its parameters are its own to judge, one by one.
     stated: Any = name if len(window) == 1 else window
@@ -205,7 +206,7 @@ class KaiserPlan:
 
     def taps(self, length: int) -> NDArray[np.float64]:
         """The windowed ideal response, shape (length,), symmetric."""
-        window = np.asarray(windows.kaiser(length, self.beta(length), sym=True))
+        window = np.kaiser(length, self.beta(length))
         return ideal_taps(length, self.steps_hz, self.gains, self.rate_hz) * window
 
 
