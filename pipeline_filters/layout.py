@@ -230,19 +230,18 @@ def plan_spans(
     *,
     span_samples: int,
     reach_samples: int,
-    chunk_samples: int = 1,
+    least_samples: int = 1,
 ) -> list[Span]:
     """Cuts every box into spans of about ``span_samples`` values.
 
     A span of a chain that is warmed up over its reach is also at least 16 reaches long, so
-    that warming up stays a small share of the work; and at least a chunk of the source, which
-    would be decoded by several otherwise. What is left over is shared out, so that no sliver
-    remains.
+    that warming up stays a small share of the work; and at least ``least_samples`` along time.
+    What is left over is shared out, so that no sliver remains.
     """
     spans = []
     total = grid.counts[grid.time_dim]
     for box in boxes:
-        samples = max(span_samples // max(1, box_rows(box)), 16 * reach_samples, chunk_samples)
+        samples = max(span_samples // max(1, box_rows(box)), 16 * reach_samples, least_samples)
         units = max(1, ceil(samples / grid.time_unit))
         pieces = max(1, total // units)
         edges = [round(index * total / pieces) for index in range(pieces + 1)]

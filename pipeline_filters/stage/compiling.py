@@ -121,6 +121,8 @@ class CompiledResult:
         chain = self.chain
         reach = sum(chain.reach().block_reach) if chain.independent else 0
         values = int(np.prod(self.grid.shape))
+        # A span decodes the chunks at its edges that its neighbours decode too.
+        chunk, length = self.reader.chunk_samples, self.reader.length
         share = values // (SPANS_PER_WORKER * workers) + 1
         size = span_samples or min(SPAN_SAMPLES, share)
         return plan_spans(
@@ -128,7 +130,7 @@ class CompiledResult:
             self.boxes,
             span_samples=size,
             reach_samples=reach,
-            chunk_samples=1 if span_samples else self.reader.chunk_samples,
+            least_samples=1 if span_samples else max(chunk, min(8 * chunk, length // workers)),
         )
 
     def job(self, writer: Writer) -> Job:

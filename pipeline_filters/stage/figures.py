@@ -82,9 +82,10 @@ def _band(of: str, finding: BandFinding) -> Figures:
     }
 
 
-def layout_figures(compiled: CompiledResult, spans: list[Span]) -> Figures:
+def layout_figures(compiled: CompiledResult, workers: int) -> Figures:
     """Stretches, spans, and how often each chunk of the source is decoded."""
     reader, grid = compiled.reader, compiled.grid
+    spans = compiled.spans(workers)
     figures = {
         "samples": reader.length,
         "channels": prod(without(reader.shape, reader.time_dim)),
@@ -100,7 +101,7 @@ def layout_figures(compiled: CompiledResult, spans: list[Span]) -> Figures:
         # What it would be in a product of its own with the source's chunks.
         like_source = replace(compiled, result=replace(compiled.result, chunks=None), stored=None)
         figures["decodings_with_the_chunks_of_the_source"] = decodings_of(
-            like_source, like_source.spans(1)
+            like_source, like_source.spans(workers)
         )
     return figures
 

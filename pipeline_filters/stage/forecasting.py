@@ -92,7 +92,7 @@ def run_figures(one: CompiledResult, workers: int) -> dict[str, Any]:
     """What is known of one result before its run."""
     return {
         **one.figures,
-        **layout_figures(one, one.spans(workers)),
+        **layout_figures(one, workers),
         "step_bytes": step_bytes(one),
     }
 
