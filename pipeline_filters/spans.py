@@ -18,7 +18,7 @@ from pipeline_filters.chain.model import Chain
 from pipeline_filters.errors import FilterStageError, Problem, SourceError
 from pipeline_filters.kernels.overlap_add import copy_rows
 from pipeline_filters.kernels.slab import Comparable, Slab, all_finite, cut_slab
-from pipeline_filters.layout import Box, Span, Stretches, UnitGrid, box_rows
+from pipeline_filters.layout import Box, Span, Stretch, Stretches, UnitGrid, box_rows
 from pipeline_filters.stream import Stream
 
 Array = NDArray[Any]
@@ -158,22 +158,26 @@ class _Work:
             for slab in ahead:
                 self._give(slab)
             while stream.next_result < high:
-                for slab in self._pushed(stream, stretch.start):
+                for slab in self._pushed(stream, stretch, high):
                     self._give(slab)
             if high == stretch.length:  # else results that ran ahead still belong to it
                 self.carry.stream = None
         self._drop_raw()
         return self.carry
 
-    def _pushed(self, stream: Stream, origin: int) -> Iterator[Slab]:
-        """Reads up to the end of a source chunk, or of the stretch, and pushes it.
+    def _pushed(self, stream: Stream, stretch: Stretch, high: int) -> Iterator[Slab]:
+        """Reads on towards the results before ``high``, and pushes what it reads.
 
-        Small chunks are read several at a time, as each read has a cost of its own.
+        A read ends with a chunk of the source, or with what is wanted. Small chunks are read
+        several at a time, as each read has a cost of its own.
         """
         job = self.job
-        start = origin + stream.next_input
+        start = stretch.start + stream.next_input
         unit = job.chunk_samples * max(1, PIECE_SAMPLES // (self.rows * job.chunk_samples))
-        stop = min((start // unit + 1) * unit, origin + stream.length)
+        wanted = stretch.start + self._wanted(stretch, high)
+        # A chain with a recursion may ask for more at a start: a chunk at a time, then.
+        least = (start // job.chunk_samples + 1) * job.chunk_samples
+        stop = min((start // unit + 1) * unit, max(wanted, least), stretch.stop)
         raw = job.reader.read(start, stop, self.box)
         self.record.samples_read += raw.size
         self.record.chunks_decoded += (
@@ -186,6 +190,11 @@ class _Work:
             piece = job.reader.decode(rows[:, low : low + size], job.chain.dtype)
             job.reader.screen(piece, start + low, self.box)
             yield stream.push(piece)
+
+    def _wanted(self, stretch: Stretch, high: int) -> int:
+        if self.job.chain.independent:
+            return self.job.chain.reach().last_offset(stretch, high)
+        return min(stretch.length, high + self.job.chain.hold_back)
 
     def _keep_raw(self, start: int, raw: Array) -> None:
         """Keeps the samples of this and later spans until their unit is complete."""

@@ -118,19 +118,19 @@ class CompiledResult:
 
     def spans(self, workers: int, span_samples: int | None = None) -> list[Span]:
         """The work, cut so that every worker has several spans; the numbers do not depend on it."""
+        if span_samples is not None:
+            return plan_spans(self.grid, self.boxes, span_samples=span_samples, reach_samples=0)
         chain = self.chain
-        reach = sum(chain.reach().block_reach) if chain.independent else 0
         values = int(np.prod(self.grid.shape))
+        share = values // (SPANS_PER_WORKER * workers) + 1
         # A span decodes the chunks at its edges that its neighbours decode too.
         chunk, length = self.reader.chunk_samples, self.reader.length
-        share = values // (SPANS_PER_WORKER * workers) + 1
-        size = span_samples or min(SPAN_SAMPLES, share)
         return plan_spans(
             self.grid,
             self.boxes,
-            span_samples=size,
-            reach_samples=reach,
-            least_samples=1 if span_samples else max(chunk, min(8 * chunk, length // workers)),
+            span_samples=min(SPAN_SAMPLES, share),
+            reach_samples=sum(chain.reach().block_reach) if chain.independent else 0,
+            least_samples=max(chunk, min(8 * chunk, length // workers)),
         )
 
     def job(self, writer: Writer) -> Job:
