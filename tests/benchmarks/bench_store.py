@@ -98,6 +98,11 @@ def main() -> None:
         print(json.dumps(report))
         return
     print(f"plain dask copy: {report['copy_seconds']:.2f} s")
+    short, whole = report["peak_chunks"]
+    print(
+        f"a worker's peak above an idle interpreter: {whole:.1f} decoded chunks, "
+        f"{short:.1f} for a source a quarter as long"
+    )
     for row in report["rows"]:
         print(
             f"P {row['taps']:5d}: ours {row['ours_seconds']:.2f} s, {row['over_copy']:.2f} of the "
@@ -106,12 +111,34 @@ def main() -> None:
         )
 
 
+IDLE = """\
+import resource
+import pipeline_filters.graph.workers, pipeline_filters.source.zarr_source
+import pipeline_filters.product.writer
+print(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss * 1024)
+"""
+
+
+def peak_chunks(folder: Path, spec: Path, gib: float) -> float:
+    """The largest worker's peak above an idle interpreter, in decoded chunks."""
+    source, target = folder / "memory.zarr", folder / "target.zarr"
+    make_source(source, gib)
+    shutil.rmtree(target, ignore_errors=True)
+    ours = ["filter", str(spec), str(source), str(target), "--workers", "2", "--json"]
+    command = [sys.executable, "-c", OURS, *ours]
+    record = json.loads(subprocess.run(command, check=True, capture_output=True).stdout)
+    idle = int(subprocess.run([sys.executable, "-c", IDLE], check=True, capture_output=True).stdout)
+    shutil.rmtree(source)
+    return (record["memory"]["peak_bytes_a_worker"] - idle) / (CHUNK * CHANNELS * 4)
+
+
 def measured(folder: Path, gib: float, rounds: int) -> dict:
     source, target = folder / "source.zarr", folder / "target.zarr"
     samples = make_source(source, gib)
     specs = {taps: folder / f"{taps}.yaml" for taps in TAPS}
     for taps, path in specs.items():
         path.write_text(SPEC.format(taps=taps))
+    memory = [peak_chunks(folder, specs[5001], gib * share) for share in (0.25, 1)]
     walls: dict[str, list[float]] = {}
     for _ in range(rounds):
         jobs = {"copy": (COPY, [str(source), str(target)])}
@@ -132,7 +159,13 @@ def measured(folder: Path, gib: float, rounds: int) -> dict:
         }
         for taps in TAPS
     ]
-    return {"samples": samples, "copy_seconds": median["copy"], "rows": rows, "walls": walls}
+    return {
+        "samples": samples,
+        "copy_seconds": median["copy"],
+        "rows": rows,
+        "walls": walls,
+        "peak_chunks": memory,
+    }
 
 
 if __name__ == "__main__":
