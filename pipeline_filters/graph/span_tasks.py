@@ -13,9 +13,13 @@ from dask.callbacks import Callback
 from pipeline_filters.layout import Span
 from pipeline_filters.spans import Carry, Job, Jobs, SpanRecord, run_span
 
+# Dask takes up independent tasks by falling keys: keys that count down along time let results
+# appear from the start on. Nothing but that order hangs on it.
+_LATEST = 10**15 - 1
+
 _adopted: dict[str, Job] = {}
 
-Key = tuple[str, str, int, int]
+Key = tuple[str, int, str, int]
 Graph = dict[Key, tuple[Any, ...]]
 
 
@@ -48,9 +52,9 @@ def span_graph(jobs: Jobs, spans: Mapping[str, Sequence[Span]]) -> tuple[Graph, 
     for result, job in jobs.items():
         last: dict[str, Key] = {}
         group: dict[str, int] = {}
-        for index, span in enumerate(spans[result]):
+        for span in spans[result]:
             box = repr(span.box)
-            key = ("span", result, group.setdefault(box, len(group)), index)
+            key = ("span", _LATEST - span.first_unit, result, group.setdefault(box, len(group)))
             before = None if job.chain.independent else last.get(box)
             graph[key] = (run_named, result, span, before)
             last[box] = key

@@ -75,6 +75,16 @@ def list_results(
     write_node(root, with_copy_of_all(root, node))
 
 
+def unlist_results(root: Path, results: Iterable[str]) -> None:
+    """Takes results out of the root's mark in one step: from here on they do not count."""
+    node = read_node(root)
+    gone = set(results)
+    listed = node["attributes"][MARK]["results"]
+    kept = {name: digest for name, digest in listed.items() if name not in gone}
+    node["attributes"][MARK]["results"] = kept
+    write_node(root, with_copy_of_all(root, node))
+
+
 def clear_unlisted(root: Path, result: str) -> None:
     """Takes away what a creation that did not end has left of a result."""
     for folder in result_folders(root, result):

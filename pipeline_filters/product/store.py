@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+import shutil
 import uuid
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from math import ceil
 from pathlib import Path
@@ -26,6 +27,7 @@ from pipeline_filters.product.creation import (
     list_results,
     plain,
     time_fill,
+    unlist_results,
 )
 from pipeline_filters.product.lock import hold_file
 from pipeline_filters.product.nodes import change_attributes, copy_is_fresh, read_node, refresh_copy
@@ -187,6 +189,30 @@ class Product:
             change_attributes(self.path / result, attributes)
             refresh_copy(self.path)
         self.results = dict(inspection.inspect(self.path).results)
+
+    def discard(self, results: Iterable[str]) -> None:
+        """Takes away results of which nothing is done; the product too where none is left.
+
+        For a run that was refused before it had made anything: what it had made room for
+        would stand in the way of the same run with a mended spec. To be called within
+        ``hold``.
+
+        Raises:
+            SurroundingsError: the target is not writable.
+        """
+        empty = {name for name in results if not self.register(name).done().any()}
+        left = {name: state for name, state in self.results.items() if name not in empty}
+        if not empty:
+            return
+        with refused_by_the_system(self.path):
+            if left:
+                unlist_results(self.path, empty)
+                for name in empty:
+                    clear_unlisted(self.path, name)
+                refresh_copy(self.path)
+            else:
+                shutil.rmtree(self.path)
+        self.results = left
 
     def _complete(
         self,

@@ -10,7 +10,7 @@ from typing import Any
 
 import numpy as np
 
-from pipeline_filters.errors import Problem, StoppedEarlyError
+from pipeline_filters.errors import Problem, SourceError, StoppedEarlyError
 from pipeline_filters.graph.span_tasks import run_graph
 from pipeline_filters.graph.workers import schedulers
 from pipeline_filters.layout import Span, UnitGrid
@@ -111,6 +111,10 @@ def run(
         work = _Work(made, to_do, taken, span_samples, progress)
         try:
             work.run()
+        except SourceError:
+            work.close()
+            made.discard(name for name, one in to_do.items() if one.stored is None)
+            raise
         finally:
             work.close()
     for name, one in work.compiled.items():
