@@ -5,18 +5,20 @@ from __future__ import annotations
 import base64
 import struct
 from collections.abc import Mapping
-from math import ceil, floor, inf
+from math import ceil, floor, inf, isfinite, isnan
 from typing import Any
 
 import numpy as np
 
 from pipeline_filters.errors import Problem, SourceError
 from pipeline_filters.source.decoding import Decoding
+from pipeline_filters.spec.findings import shortened
 from pipeline_filters.spec.model import Signal
 
 MARKERS = ("_FillValue", "missing_value")
 _RANGE = ("valid_min", "valid_max", "valid_range")
 _PACKING = ("scale_factor", "add_offset")
+_WANTED = {"valid_range": 2, **dict.fromkeys(("valid_min", "valid_max", *_PACKING), 1)}
 _REAL = "float16, float32, float64 or integers"
 
 
@@ -52,22 +54,18 @@ def build_decoding(
         )
     read_as = _read_as(dtype, attrs)
     problems: list[Problem] = []
-    found = {
-        key: numbers(attrs[key], dtype, f"{where}, attribute {key}", problems)
-        for key in (*MARKERS, *_RANGE, *_PACKING)
-        if key in attrs
-    }
-    for key, wanted in (("valid_range", 2), ("valid_min", 1), ("valid_max", 1)):
-        if key in found and (len(found[key]) != wanted or np.isnan(found[key]).any()):
-            problems.append(_not_so_many(f"{where}, attribute {key}", found[key], wanted))
-    for key in _PACKING:
-        if key in found and (len(found[key]) != 1 or not np.isfinite(found[key][0])):
-            problems.append(_not_so_many(f"{where}, attribute {key}", found[key], 1))
+    found: dict[str, tuple[float, ...]] = {}
+    for key in (*MARKERS, *_RANGE, *_PACKING):
+        if key in attrs:
+            place, before = f"{where}, attribute {key}", len(problems)
+            found[key] = numbers(attrs[key], dtype, place, problems)
+            if len(problems) == before and not _of_use(key, found[key]):
+                problems.append(_not_so_many(place, found[key], _WANTED[key]))
     if problems:
         raise SourceError(*problems)
     if read_as != dtype:
         for key in (*MARKERS, *_RANGE):
-            found[key] = tuple(_wrapped(value, read_as) for value in found.get(key, ()))
+            found[key] = tuple(_wrapped(value, dtype, read_as) for value in found.get(key, ()))
     low, high = _bounds(found, read_as, where)
     scale, offset = (found[key][0] if key in found else None for key in _PACKING)
     markers = [value for key in MARKERS for value in found.get(key, ())]
@@ -94,9 +92,9 @@ def _read_as(dtype: np.dtype[Any], attrs: Mapping[str, Any]) -> np.dtype[Any]:
     return dtype
 
 
-def _wrapped(value: float, read_as: np.dtype[Any]) -> float:
+def _wrapped(value: float, dtype: np.dtype[Any], read_as: np.dtype[Any]) -> float:
     """A marker given in the stored type's sign, in the sign that samples are read in."""
-    if not np.isfinite(value) or value != int(value):
+    if not fits(value, dtype):
         return value
     bits = 8 * int(read_as.itemsize)
     wrapped = int(value) % (1 << bits)
@@ -116,8 +114,8 @@ def _bounds(
         least, most = float(np.finfo(dtype).min), float(np.finfo(dtype).max)
     else:
         least, most = int(np.iinfo(dtype).min), int(np.iinfo(dtype).max)
-        low = ceil(low) if np.isfinite(low) else low
-        high = floor(high) if np.isfinite(high) else high
+        low = ceil(low) if isfinite(low) else low
+        high = floor(high) if isfinite(high) else high
     if not (low <= high and low <= most and high >= least):
         raise SourceError(
             Problem(
@@ -130,7 +128,10 @@ def _bounds(
     # Infinities in floats are left to the policy for infinite samples where no bound is stated.
     bounded_low = low > least or (dtype.kind == "f" and low > -inf)
     bounded_high = high < most or (dtype.kind == "f" and high < inf)
-    return max(low, least) if bounded_low else None, min(high, most) if bounded_high else None
+    return (
+        as_stored(max(low, least), dtype) if bounded_low else None,
+        as_stored(min(high, most), dtype) if bounded_high else None,
+    )
 
 
 def fits(value: float, dtype: np.dtype[Any]) -> bool:
@@ -138,7 +139,8 @@ def fits(value: float, dtype: np.dtype[Any]) -> bool:
     if value != value:
         return False
     if dtype.kind == "f":
-        return bool(abs(value) == inf or abs(value) <= np.finfo(dtype).max)
+        # Rounded first: decimals of the largest float lie a little above it.
+        return abs(value) == inf or isfinite(as_stored(value, dtype))
     if abs(value) == inf:
         return False
     return bool(value == int(value) and np.iinfo(dtype).min <= value <= np.iinfo(dtype).max)
@@ -148,26 +150,42 @@ def as_stored(value: float, dtype: np.dtype[Any]) -> float:
     """A marker as raw samples hold it: rounded to their type, an int for integers."""
     if dtype.kind in "iu":
         return int(value)
-    return float(np.asarray(value, dtype))
+    with np.errstate(over="ignore"):
+        return float(np.float64(value).astype(dtype))
 
 
 def numbers(
     value: Any, dtype: np.dtype[Any], where: str, problems: list[Problem]
 ) -> tuple[float, ...]:
     """The numbers of an attribute, int or float; what is none is added to ``problems``."""
-    values = value if isinstance(value, (list, tuple, np.ndarray)) else [value]
+    values = np.atleast_1d(value) if isinstance(value, np.ndarray) else value
+    if not isinstance(values, (list, tuple, np.ndarray)):
+        values = [value]
     out: list[float] = []
     for item in values:
         number = item.item() if isinstance(item, np.generic) else item
         if isinstance(number, str):
             number = _text_number(number, dtype)
-        if isinstance(number, bool) or not isinstance(number, (int, float)):
+        if (
+            isinstance(number, bool)
+            or not isinstance(number, (int, float))
+            or (isinstance(number, int) and abs(number) >= 2**1023)
+        ):
+            shown = shortened(repr(item))
             problems.append(
-                Problem(where, f"{item!r}, which is no number", "numbers", "mend the attribute")
+                Problem(where, f"{shown}, which is no number", "numbers", "mend the attribute")
             )
         else:
             out.append(number)
     return tuple(out)
+
+
+def _of_use(key: str, values: tuple[float, ...]) -> bool:
+    """Whether there are as many numbers as the attribute needs, and of the right kind."""
+    if key in MARKERS:
+        return True
+    unfit = any(map(isnan, values)) if key in _RANGE else not all(map(isfinite, values))
+    return len(values) == _WANTED[key] and not unfit
 
 
 def _not_so_many(where: str, found: tuple[float, ...], wanted: int) -> Problem:

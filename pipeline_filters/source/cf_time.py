@@ -105,7 +105,11 @@ class TimeUnits:
         unit, count = np.datetime_data(dtype)
         unit_ns = UNIT_NS.get(_NUMPY_UNITS.get(unit, unit))
         if unit_ns is None:
-            raise TimeUnitError(f"stamps of type {dtype}", "units from ns to weeks")
+            raise TimeUnitError(
+                f"stamps of type {dtype}",
+                "units from ns to weeks",
+                "store the stamps in one of these units",
+            )
         kind: Kind = "stamped" if dtype.kind == "M" else "elapsed"
         return cls(kind, unit_ns * count, 0, (_NO_TIME,))
 

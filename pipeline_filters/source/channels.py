@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Mapping
 from typing import Any
 
@@ -22,14 +23,29 @@ def channel_coords(
 
     These are the arrays named as its dimensions, and those that its ``coordinates``
     attribute, or the group's, lists.
+
+    Raises:
+        SourceError: a coordinate that cannot be read, or of another size than its dimensions.
     """
+    sizes = dict(zip(dims, offer.shape, strict=True))
     along = set(dims) - {dims[time_dim]}
     listed = f"{offer.attrs.get('coordinates', '')} {offers.shared_coordinates()}".split()
     coords: dict[str, Coordinate] = {}
     for name in sorted({*along, *listed} - {offer.name, dims[time_dim]}):
         found = offers.find(name)
-        if found is not None and found.dims and set(found.dims) <= along:
-            coords[name] = (found.dims, found.load(), found.attrs)
+        if found is None or not found.dims or not set(found.dims) <= along:
+            continue
+        wanted = tuple(sizes[dim] for dim in found.dims)
+        if found.shape != wanted:
+            raise SourceError(
+                Problem(
+                    f"{offers.where}, coordinate {name}",
+                    f"its shape is {found.shape}",
+                    f"{wanted}, as variable {offer.name} is along {', '.join(found.dims)}",
+                    f"mend coordinate {name}, or remove it",
+                )
+            )
+        coords[name] = (found.dims, found.load(), found.attrs)
     return coords
 
 
@@ -68,9 +84,21 @@ def keep_of(
             )
         )
     labels = _texts(coords[dim][1])
+    places = {label: at for at, label in enumerate(labels)}
+    counts = Counter(labels)
+    keep = [_text(label) for label in signal.channels.keep]
     problems = []
-    for label in map(_text, signal.channels.keep):
-        count = labels.count(label)
+    for label in dict.fromkeys(keep):
+        count = counts[label]
+        if keep.count(label) > 1:
+            problems.append(
+                Problem(
+                    where,
+                    f"{dim} {label} is kept {keep.count(label)} times",
+                    "each channel once",
+                    f"state {label} once under keep",
+                )
+            )
         if count == 0:
             shown = ", ".join(labels[:_SHOWN]) + (" ..." if len(labels) > _SHOWN else "")
             remedy = did_you_mean(label, labels, "keep labels that the source has")
@@ -86,7 +114,7 @@ def keep_of(
             )
     if problems:
         raise SourceError(*problems)
-    return {dim: tuple(labels.index(_text(label)) for label in signal.channels.keep)}
+    return {dim: tuple(places[label] for label in keep)}
 
 
 def labels_of(
@@ -109,7 +137,10 @@ def kept_coord(coord: Coordinate, keep: Mapping[str, tuple[int, ...]]) -> Coordi
 
 
 def _texts(labels: Any) -> list[str]:
-    return [_text(label) for label in np.asarray(labels).tolist()]
+    values = np.asarray(labels)
+    if values.dtype.kind == "f":
+        values = values.astype(str).astype(np.float64)  # float32 0.1 is the spec's 0.1
+    return [_text(label) for label in values.tolist()]
 
 
 def _text(label: object) -> str:

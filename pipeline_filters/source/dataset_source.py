@@ -19,6 +19,7 @@ from pipeline_filters.source.cf_time import TimeUnitError, TimeUnits
 from pipeline_filters.source.fitting import Fit, fit_all
 from pipeline_filters.source.offers import Offer
 from pipeline_filters.source.readers import SignalReader, Source
+from pipeline_filters.spec.findings import shortened
 from pipeline_filters.spec.model import Signal
 
 __all__ = ["DatasetReader", "DatasetStamps", "open_dataset_source"]
@@ -42,7 +43,7 @@ class DatasetStamps:
 
     def read(self, start: int, stop: int) -> Array:
         """Raw stamps of samples [start, stop); datetimes where xarray has decoded them."""
-        return np.asarray(self.variable[start:stop].values)
+        return _loaded(self.variable[start:stop], f"coordinate {self.name}", start, stop)
 
     def resolution_ns(self, step_ns: Fraction) -> Fraction:
         """How coarse the stamps are, beside a step of ``step_ns``: as they were stored.
@@ -80,10 +81,15 @@ class DatasetReader(SignalReader):
         return self.variable.data
 
     def read(self, start: int, stop: int, box: tuple[slice, ...]) -> Array:
-        """Undecoded samples [start, stop) of a box of kept channels, in the source's order."""
+        """Undecoded samples [start, stop) of a box of kept channels, in the source's order.
+
+        Raises:
+            SourceError: samples that cannot be read, by their range.
+        """
         index = list(box)
         index.insert(self.time_dim, slice(start, stop))
-        return np.asarray(self.variable[tuple(index)].values)
+        where = f"variable {self.signal.variable}"
+        return _loaded(self.variable[tuple(index)], where, start, stop)
 
 
 def without_samples(reader: DatasetReader, axis: Axis) -> DatasetReader:
@@ -116,9 +122,10 @@ class _Dataset:
 
     where = _WHERE
 
-    def __init__(self, dataset: xr.Dataset, samples: frozenset[str]) -> None:
+    def __init__(self, dataset: xr.Dataset, signals: Mapping[str, Signal]) -> None:
         self._dataset = dataset
-        self._samples = samples  # the variables that are filtered
+        self._samples = {signal.variable for signal in signals.values()}
+        self._times = {signal.time for signal in signals.values()}
 
     def find(self, name: str) -> Offer | None:
         if name not in self._dataset.variables:
@@ -126,13 +133,16 @@ class _Dataset:
         variable = self._dataset.variables[name]
         if name in self._samples:
             _refuse_unpacked(name, variable)
+        elif variable.dtype.kind in "mM" and name not in self._times:
+            # A coordinate that xarray has decoded: as it was stored.
+            variable = xr.conventions.encode_cf_variable(variable, name=name)
         return Offer(
             name,
             tuple(str(dim) for dim in variable.dims),
             variable.shape,
             variable.dtype,
-            variable.attrs,
-            lambda: np.asarray(variable.values),
+            _attributes(variable),
+            lambda: _loaded(variable, f"coordinate {name}"),
             variable,
         )
 
@@ -141,6 +151,43 @@ class _Dataset:
 
     def shared_coordinates(self) -> str:
         return " ".join(str(name) for name in self._dataset.coords)
+
+
+def _loaded(
+    variable: xr.Variable, where: str, start: int | None = None, stop: int | None = None
+) -> Array:
+    """Values, computed where they are lazy; what goes wrong there is refused by its place."""
+    try:
+        return np.asarray(variable.values)
+    except MemoryError:
+        raise
+    except Exception as error:
+        text = shortened(f"{type(error).__name__}: {error}", 140)
+        raise SourceError(
+            Problem(
+                f"{_WHERE}, {where}" + ("" if start is None else f", samples {start} to {stop}"),
+                f"cannot be read ({text})",
+                "values that can be computed",
+                "mend what the dataset was opened from, or how it is computed",
+            )
+        ) from error
+
+
+def _attributes(variable: xr.Variable) -> dict[str, Any]:
+    """The attributes in plain values, without the fill value 0 of Zarr format 2.
+
+    xarray shows every fill value of that format as _FillValue; 0 is what stores without CF have,
+    and no marker. Only format 3 has a serializer and, beside it, a fill value in its encoding.
+    """
+    attrs = {
+        str(key): value.tolist() if isinstance(value, (np.generic, np.ndarray)) else value
+        for key, value in variable.attrs.items()
+    }
+    encoding = variable.encoding
+    format_2 = "compressors" in encoding and not {"serializer", "fill_value"} & encoding.keys()
+    if format_2 and attrs.get("_FillValue") == 0:
+        del attrs["_FillValue"]
+    return attrs
 
 
 def _refuse_unpacked(name: str, variable: xr.Variable) -> None:
@@ -172,8 +219,7 @@ def open_dataset_source(dataset: xr.Dataset, signals: Mapping[str, Signal]) -> S
     Raises:
         SourceError: with every problem of every signal.
     """
-    samples = frozenset(signal.variable for signal in signals.values())
-    fits = fit_all(_Dataset(dataset, samples), signals)
+    fits = fit_all(_Dataset(dataset, signals), signals)
     return Source(_WHERE, {name: _reader(fit) for name, fit in fits.items()})
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from math import inf
 from typing import Any
 
 import numpy as np
@@ -94,8 +95,9 @@ class Decoding:
         return missing
 
     def facts(self) -> dict[str, Any]:
-        """The decoding as JSON-able facts."""
-        return {key: list(v) if isinstance(v, tuple) else v for key, v in vars(self).items()}
+        """The decoding as JSON-able facts: an infinite marker, which JSON lacks, as a text."""
+        markers = [str(m) if m in (inf, -inf) else m for m in self.markers]
+        return {**vars(self), "markers": markers}
 
 
 def _joined(one: NDArray[np.bool_] | None, other: NDArray[np.bool_]) -> NDArray[np.bool_]:

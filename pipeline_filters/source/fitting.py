@@ -58,15 +58,13 @@ def fit_signal(offers: Offers, signal: Signal) -> Fit:
     """
     where = f"{offers.where}, variable {signal.variable}"
     offer = _variable(offers, signal, where)
-    dims, time_dim = _dimensions(offer, signal, where)
-    if not all(offer.shape):
-        sizes = ", ".join(f"{dim} {n}" for dim, n in zip(dims, offer.shape, strict=True))
-        raise SourceError(
-            Problem(where, f"no samples ({sizes})", "at least one sample", "fill the source first")
-        )
     problems: list[Problem] = []
+    named = _attempt(problems, lambda: _dimensions(offer, signal, where))
     decoding = _attempt(problems, lambda: build_decoding(offer.dtype, offer.attrs, signal, where))
     _attempt(problems, lambda: _check_unit(offer, signal, where))
+    if named is None:
+        raise SourceError(*problems)
+    dims, time_dim = named
     stamps = _attempt(problems, lambda: _stamps(offers, signal, offer.shape[time_dim]))
     coords = _attempt(problems, lambda: channel_coords(offers, offer, dims, time_dim)) or {}
     keep = _attempt(problems, lambda: keep_of(signal, dims, time_dim, coords, where)) or {}
@@ -138,19 +136,26 @@ def _dimensions(offer: Offer, signal: Signal, where: str) -> tuple[tuple[str, ..
     dims = offer.dims
     if not dims and len(offer.shape) == 1:
         dims = (signal.time,)
-    if dims.count(signal.time) == 1 and len(set(dims)) == len(dims):
-        return dims, dims.index(signal.time)
-    named = f"its dimensions are {', '.join(dims)}" if dims else "its dimensions have no names"
-    raise SourceError(
-        Problem(
-            where,
-            f"no dimension {signal.time}" if signal.time not in dims else "dimensions of one name",
-            named,
-            did_you_mean(signal.time, dims, f"state time: for signal {signal.name}")
-            if dims
-            else "store dimension names (Zarr v3: dimension_names, v2: _ARRAY_DIMENSIONS)",
+    shown = ", ".join(dims)
+    if signal.time in dims and len(set(dims)) == len(dims):
+        if all(offer.shape):
+            return dims, dims.index(signal.time)
+        sizes = ", ".join(f"{dim} {n}" for dim, n in zip(dims, offer.shape, strict=True))
+        told = (f"no samples ({sizes})", "at least one sample", "fill the source first")
+    elif not offer.shape:
+        told = ("a single value", "samples along a time dimension", "name another variable")
+    elif not dims:
+        told = (
+            f"no dimension {signal.time}: its dimensions have no names",
+            "dimension names (Zarr v3: dimension_names, v2: _ARRAY_DIMENSIONS)",
+            "store its dimension names",
         )
-    )
+    elif signal.time in dims:
+        told = (f"dimensions {shown}", "a name of its own for each dimension", "rename them")
+    else:
+        remedy = did_you_mean(signal.time, dims, f"state time: for signal {signal.name}")
+        told = (f"no dimension {signal.time}", f"its dimensions are {shown}", remedy)
+    raise SourceError(Problem(where, *told))
 
 
 def _check_unit(offer: Offer, signal: Signal, where: str) -> None:
@@ -182,12 +187,13 @@ def _stamps(offers: Offers, signal: Signal, length: int) -> tuple[Offer | None, 
     if offer is None:
         return None, None
     where = f"{offers.where}, coordinate {signal.time}"
-    if len(offer.shape) != 1 or offer.shape[0] != length:
+    along = offer.dims or (signal.time,)
+    if offer.shape != (length,) or along != (signal.time,):
         raise SourceError(
             Problem(
                 where,
-                f"its shape is {offer.shape}",
-                f"one stamp for each of {length} samples",
+                f"its shape is {offer.shape} along {', '.join(along)}",
+                f"one stamp for each of {length} samples along {signal.time}",
                 "mend the source, so that every sample has one stamp",
             )
         )

@@ -13,9 +13,10 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from pipeline_filters.errors import Problem, SourceError
 from pipeline_filters.source.axis import Axis, counted_axis
 from pipeline_filters.source.axis_scan import StampReader, scan_axis
-from pipeline_filters.source.cf_time import stamp_text
+from pipeline_filters.source.cf_time import TimeUnitError, stamp_text
 from pipeline_filters.source.decoding import Decoding
 from pipeline_filters.source.offers import Coordinate
 from pipeline_filters.source.screening import screen_rows
@@ -122,10 +123,19 @@ class SignalReader(ABC):
         screen_rows(rows, self.signal, lambda row, column: self.place(start + column, row, box))
 
     def stamps_ns(self, start: int, stop: int) -> NDArray[np.int64] | None:
-        """Stamps of samples [start, stop), int64 ns; None for a counted source."""
+        """Stamps of samples [start, stop), int64 ns; None for a counted source.
+
+        Raises:
+            SourceError: a stamp that is missing or out of range; stamps that cannot be read.
+        """
         if self.stamps is None:
             return None
-        return self.stamps.units.to_ns(self.stamps.read(start, stop))
+        try:
+            return self.stamps.units.to_ns(self.stamps.read(start, stop))
+        except TimeUnitError as error:
+            at = start + (error.at or 0)
+            where = f"{self.signal.variable}, coordinate {self.stamps.name}, sample {at}"
+            raise SourceError(Problem(where, error.found, error.allowed, error.remedy)) from None
 
     def channel_coords(self) -> Mapping[str, Coordinate]:
         """The coordinates along channel dimensions only, of the kept channels."""
@@ -154,11 +164,8 @@ class SignalReader(ABC):
         JSON-able: variable, dimensions, shape, type, first and last stamp, unit, decoding,
         and a digest of the kept channels' labels.
         """
-        ends = None
-        if self.stamps is not None:
-            read, units = self.stamps.read, self.stamps.units
-            last = read(self.length - 1, self.length)
-            ends = [int(units.to_ns(raw)[0]) for raw in (read(0, 1), last)]
+        stamps = [self.stamps_ns(at, at + 1) for at in (0, self.length - 1)]
+        ends = [int(stamp[0]) for stamp in stamps if stamp is not None] or None
         unit = self.attrs.get("units")
         return {
             "variable": self.signal.variable,

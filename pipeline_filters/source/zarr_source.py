@@ -2,10 +2,9 @@
 
 from __future__ import annotations
 
+import json
 import os
-import warnings
-from collections.abc import Iterator, Mapping
-from contextlib import contextmanager
+from collections.abc import Mapping
 from dataclasses import dataclass
 from fractions import Fraction
 from itertools import pairwise
@@ -21,7 +20,12 @@ from pipeline_filters.source.cf_time import TimeUnits
 from pipeline_filters.source.fitting import Fit, fit_all
 from pipeline_filters.source.offers import Offer
 from pipeline_filters.source.readers import SignalReader, Source, rows_of
-from pipeline_filters.source.stored_array import StoredArray
+from pipeline_filters.source.stored_array import (
+    StoredArray,
+    open_array,
+    told,
+    without_format_warnings,
+)
 from pipeline_filters.spec.model import Signal
 
 __all__ = ["SignalReader", "Source", "ZarrReader", "ZarrStamps", "open_zarr_source", "rows_of"]
@@ -139,45 +143,46 @@ class _Group:
         return self._found[name]
 
     def names(self) -> list[str]:
-        return sorted(self._group.array_keys())
+        # Not by zarr, which stops or warns at whatever else lies there.
+        return sorted(place.name for place in Path(self.where).iterdir() if _is_array(place))
 
     def shared_coordinates(self) -> str:
         return str(self._group.attrs.get("coordinates", ""))
 
     def _open(self, name: str) -> Offer | None:
         path = Path(self.where) / name
-        if "/" in name or not path.is_dir():
+        if "/" in name or name in ("", ".", "..") or not os.path.isdir(path):
             return None
         try:
-            array = zarr.open_array(str(path), mode="r")
-        except FileNotFoundError:  # a group, or a folder of something else
-            return None
+            array = open_array(path)
         except Exception as error:
+            if isinstance(error, FileNotFoundError) or _is_group(path):
+                return None
             raise SourceError(
                 Problem(
                     str(path),
-                    f"cannot be opened ({type(error).__name__}: {str(error)[:120]})",
+                    f"cannot be opened ({told(error)})",
                     "an array of Zarr format 2 or 3",
                     "restore the array's metadata from its origin",
                 )
             ) from error
         attrs = {key: value for key, value in array.attrs.items() if key != "_ARRAY_DIMENSIONS"}
-        stored = StoredArray(self.where, name, array.shape, array.dtype, array.chunks, array)
+        stored = StoredArray(os.path.abspath(self.where), name, array)
         return Offer(
             name,
             _dimension_names(array),
             array.shape,
             array.dtype,
             {**_marker_of_format_2(array), **attrs},
-            lambda: stored.read((slice(None),) * array.ndim if array.ndim else ()),
-            array,
+            lambda: stored.read((slice(None),) * array.ndim),
+            stored,
         )
 
 
 def _dimension_names(array: Any) -> tuple[str, ...]:
     """As Zarr v3 stores them, or as xarray does in v2; () where they are not all named."""
     names = getattr(array.metadata, "dimension_names", None) or array.attrs.get("_ARRAY_DIMENSIONS")
-    if not names or len(names) != array.ndim or any(name is None for name in names):
+    if not isinstance(names, (list, tuple)) or len(names) != array.ndim or None in names:
         return ()
     return tuple(str(name) for name in names)
 
@@ -205,65 +210,68 @@ def open_zarr_source(path: str | os.PathLike[str], signals: Mapping[str, Signal]
         SourceError: with every problem of every signal.
     """
     path = os.fspath(path)
-    with _without_warnings_of_labels():
+    with without_format_warnings():
         fits = fit_all(_Group(path, _open_group(path)), signals)
-        return Source(path, {name: _reader(path, fit) for name, fit in fits.items()})
+        return Source(path, {name: _reader(fit) for name, fit in fits.items()})
 
 
-def _reader(path: str, fit: Fit) -> ZarrReader:
-    array = fit.offer.array
+def _reader(fit: Fit) -> ZarrReader:
+    array: StoredArray = fit.offer.array
     stamps = None
     if fit.time_offer is not None and fit.time_units is not None:
-        stamps = ZarrStamps(
-            _stored(path, fit.time_offer), fit.time_units, fit.time_offer.array.chunks[0]
-        )
+        stored: StoredArray = fit.time_offer.array
+        stamps = ZarrStamps(stored, fit.time_units, stored.chunks[0])
     return ZarrReader(
         **fit.reader_facts(),
         stamps=stamps,
         chunks=fit.clipped(array.chunks),
         shards=None if array.shards is None else fit.clipped(array.shards),
-        path=path,
-        array=_stored(path, fit.offer),
+        path=array.path,
+        array=array,
     )
 
 
-def _stored(path: str, offer: Offer) -> StoredArray:
-    chunks = offer.array.chunks
-    return StoredArray(path, offer.name, offer.shape, offer.dtype, chunks, offer.array)
-
-
 def _open_group(path: str) -> Any:
-    try:
-        return zarr.open_group(path, mode="r", use_consolidated=False)
-    except Exception as error:
-        raise SourceError(_no_group(path, error)) from None
+    if "://" not in path and os.path.isdir(path):
+        try:
+            return zarr.open_group(os.path.abspath(path), mode="r", use_consolidated=False)
+        except Exception as error:
+            raise SourceError(_no_group(path, error)) from None
+    raise SourceError(_no_group(path, None))
 
 
-def _no_group(path: str, error: Exception) -> Problem:
-    place = Path(path)
-    found, remedy = f"not a Zarr group ({type(error).__name__})", "name the store, or a group in it"
+def _no_group(path: str, error: Exception | None) -> Problem:
+    found, remedy = "not a Zarr group", "name the store, or a group in it"
     if "://" in path:
         found, remedy = "not a local path", "mount or copy the store, and name its local path"
-    elif not place.exists():
-        found = "no such path"
-    elif not place.is_dir():
-        found = "a file"
-    elif _is_array(place):
-        found, remedy = "one array", f"name the group that it lies in: {place.parent}"
-    return Problem(path, found, "a Zarr group on a local path", remedy)
+    elif error is None:
+        found = "a file" if os.path.exists(path) else "no such path"
+    elif _is_array(Path(path)):
+        found, remedy = (
+            "one array",
+            f"name the group that it lies in: {Path(path).absolute().parent}",
+        )
+    elif not isinstance(error, FileNotFoundError):
+        found = f"its metadata cannot be read ({told(error)})"
+        remedy = "restore the group's metadata from its origin"
+    return Problem(path or "''", found, "a Zarr group on a local path", remedy)
 
 
 def _is_array(place: Path) -> bool:
+    if not place.is_dir():
+        return False
     try:
-        zarr.open_array(str(place), mode="r")
+        open_array(place)
     except Exception:
         return False
     return True
 
 
-@contextmanager
-def _without_warnings_of_labels() -> Iterator[None]:
-    """Labels of fixed width, which only name channels, make zarr warn of their type."""
-    with warnings.catch_warnings():
-        warnings.filterwarnings("ignore", message=".*does not have a Zarr V3 specification.*")
-        yield
+def _is_group(place: Path) -> bool:
+    """Whether its metadata say so; zarr takes a folder with metadata of no kind for a group."""
+    try:
+        if (place / ".zgroup").is_file():
+            return True
+        return bool(json.loads((place / "zarr.json").read_bytes())["node_type"] == "group")
+    except Exception:
+        return False

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import warnings
 from fractions import Fraction
 
 import numpy as np
@@ -59,39 +60,46 @@ def make_store(
     units=MS,
     labels=True,
     compressors="auto",
+    shards=None,
     fill_value=None,
     time_attrs=None,
     **attrs,
 ):
-    """A store with one variable, its stamps (int64 or as given) and its labels."""
+    """A store with one variable, its stamps (int64 or as given) and its labels.
+
+    ``labels`` may be the labels themselves, of any type, for the dimension geophone.
+    """
     group = zarr.open_group(str(path), mode="w", zarr_format=zarr_format)
 
-    def add(name, data, names, its_chunks, its_attrs, fill=None):
+    def add(name, data, names, its_chunks, its_attrs, fill=None, its_shards=None):
         data = np.asarray(data)
         naming = {"dimension_names": names} if zarr_format == 3 else {}
-        array = group.create_array(
-            name,
-            shape=data.shape,
-            dtype=data.dtype,
-            chunks=its_chunks or tuple(max(1, n) for n in data.shape),
-            compressors=compressors,
-            fill_value=fill,
-            **naming,
-        )
-        array[...] = data
-        its_attrs = dict(its_attrs)
-        if zarr_format == 2:
-            its_attrs["_ARRAY_DIMENSIONS"] = list(names)
-        array.attrs.update(its_attrs)
+        with warnings.catch_warnings():
+            # zarr warns where it writes texts of fixed width in format 3
+            warnings.filterwarnings("ignore", message=".*does not have a Zarr V3 specification.*")
+            array = group.create_array(
+                name,
+                shape=data.shape,
+                dtype=data.dtype,
+                chunks=its_chunks or tuple(max(1, n) for n in data.shape),
+                shards=its_shards,
+                compressors=compressors,
+                fill_value=fill,
+                **naming,
+            )
+            array[...] = data
+            its_attrs = dict(its_attrs)
+            if zarr_format == 2:
+                its_attrs["_ARRAY_DIMENSIONS"] = list(names)
+            array.attrs.update(its_attrs)
 
     values = np.asarray(values)
-    add("velocity", values, dims, chunks, attrs, fill_value)
+    add("velocity", values, dims, chunks, attrs, fill_value, shards)
     if stamps_ms is not None:
         its_attrs = {**({"units": units} if units else {}), **(time_attrs or {})}
         add("time", stamps_ms, ("time",), (64,), its_attrs)
-    if labels:
-        for dim, size in zip(dims, values.shape, strict=True):
-            if dim == "geophone":
-                # Bytes: zarr warns of other texts of fixed width.
-                add("geophone", np.array(geophones(size), "S3"), (dim,), None, {})
+    if "geophone" in dims and labels is not False:
+        if labels is True:
+            labels = np.array(geophones(values.shape[dims.index("geophone")]), "S3")
+        add("geophone", labels, ("geophone",), None, {})
     return str(path)
