@@ -179,7 +179,7 @@ def test_a_missing_stamp_is_refused_wherever_it_is_met(tmp_path):
             look()
 
 
-def test_signals_that_share_an_axis_share_its_scan(tmp_path, monkeypatch):
+def test_signals_that_share_an_axis_share_its_scan(tmp_path):
     path = make_store(tmp_path / "s.zarr", np.ones((9, 2), "f4"), np.arange(9))
     source = open_zarr_source(path, {"a": PLATE, "b": replace(PLATE, name="b", unit=None)})
     assert source.axis("a") is source.axis("b")
