@@ -33,6 +33,7 @@ OUTSIDE = {
     "jsonschema": {"spec"},
     "zarr": {"source", "product", "demo"},
     "xarray": {"source", "product", "graph", "stage"},
+    "matplotlib": {"demo"},
     "scipy.signal": {"design", "kernels"},
     "scipy.fft": {"kernels"},
 }
