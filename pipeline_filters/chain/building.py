@@ -92,7 +92,11 @@ def build_chain(spec: Spec, result: Result, responses: Sequence[Response]) -> Ch
         )
         stages.append(TapsStage(taps, lead, before, after, line, hop, transform))
     findings = _check_result_bands(result, responses, signal.rate_hz)
-    notes = tuple(note for response in responses for note in response.notes)
+    notes = tuple(
+        f"{name}, {note}"
+        for name, response in zip(result.through, responses, strict=True)
+        for note in response.notes
+    )
     return Chain(
         tuple(stages),
         signal.rate_hz,

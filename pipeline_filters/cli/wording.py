@@ -24,6 +24,7 @@ def check_lines(record: Record) -> Iterator[str]:
     yield from _warnings(record)
     for name, result in record["results"].items():
         yield from _chain_lines(name, result)
+        yield from _design_lines(result)
         if "samples" in result:
             yield f"  fits the source: {_plural(result['samples'], 'sample')}, " + _axis(result)
     yield "The spec is in order."
@@ -99,6 +100,9 @@ def _chain_lines(name: str, result: Record) -> Iterator[str]:
             f"{_amount(result['block_reach_after'])} after"
         )
     yield f"  hold-back {_amount(result['hold_back'])}"
+
+
+def _design_lines(result: Record) -> Iterator[str]:
     for band in result["bands"]:
         top = "half the rate" if band["high_hz"] is None else f"{band['high_hz']:g} Hz"
         unit = " dB" if band["unit"] == "dB" else ""
