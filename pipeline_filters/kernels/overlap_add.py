@@ -137,7 +137,7 @@ class OverlapAdd(Comparable):
         lanes = LANE_BYTES // self.dtype.itemsize
         together = max(1, BATCH_SAMPLES // size // lanes) * lanes
         many = min(blocks, together)
-        high = max(1, together // many)
+        high = -(-together // many)
         # Rows that lie a power of two apart would share the cache's few lines for them.
         work = np.zeros((min(high, self.rows), many, size + 16), self.dtype)[..., :size]
         for top in range(0, self.rows, high):
