@@ -148,15 +148,19 @@ def _memory_line(memory: Record) -> str:
 def _amount(amount: Record | None, otherwise: str = "none") -> str:
     if amount is None:
         return otherwise
-    samples = amount["samples"]
-    return f"{samples:,g} samples ({_seconds(amount['seconds'])})"
+    return f"{_number(amount['samples'])} samples ({_seconds(amount['seconds'])})"
 
 
 def _seconds(seconds: float) -> str:
     for size, unit in ((86400, "days"), (3600, "h"), (60, "min")):
         if seconds >= 2 * size:
-            return f"{seconds / size:.3g} {unit}"
+            return f"{_number(seconds / size, 3)} {unit}"
     return f"{seconds * 1000:.3g} ms" if 0 < seconds < 1 else f"{seconds:.4g} s"
+
+
+def _number(value: float, digits: int = 6) -> str:
+    """A number for people: large ones whole, without an exponent."""
+    return f"{value:,.0f}" if abs(value) >= 10**digits / 10 else f"{value:,.{digits}g}"
 
 
 def _plural(count: int, word: str, many: str = "") -> str:
