@@ -9,7 +9,8 @@ import numpy as np
 import pytest
 from scipy.special import lambertw
 
-from pipeline_filters.chain import block_rule, build_chain
+from pipeline_filters.chain.blocks import block_rule
+from pipeline_filters.chain.building import build_chain
 from pipeline_filters.design.contract import Response, SectionsResponse, TapsResponse
 from pipeline_filters.errors import SpecError
 from pipeline_filters.kernels.overlap_add import OverlapAdd

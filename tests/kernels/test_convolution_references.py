@@ -8,7 +8,9 @@ import numpy as np
 import pytest
 from scipy.signal import butter, fftconvolve, firwin, lfilter, oaconvolve, sosfilt, sosfiltfilt
 
-from pipeline_filters.chain import Chain, TapsStage, block_rule, build_chain
+from pipeline_filters.chain.blocks import block_rule
+from pipeline_filters.chain.building import build_chain
+from pipeline_filters.chain.model import Chain, TapsStage
 from pipeline_filters.design.contract import SectionsResponse
 from pipeline_filters.design.merging import AT_REST
 from pipeline_filters.kernels.missing import mark_with_nan

@@ -14,7 +14,7 @@ import numpy as np
 import pytest
 import scipy.fft
 
-from pipeline_filters.chain import Chain, TapsStage
+from pipeline_filters.chain.model import Chain, TapsStage
 from pipeline_filters.kernels.overlap_add import DirectSum, OverlapAdd
 
 pytestmark = pytest.mark.skipif(
