@@ -10,35 +10,73 @@ input was cut into slabs.
 
 from __future__ import annotations
 
+import threading
 from typing import Any
 
 import numpy as np
-import scipy.fft
 from numpy.typing import NDArray
 
 from pipeline_filters.kernels.slab import Comparable, Samples
 
-# Samples in one pair of transforms: large enough to hide the cost of a call, small enough
-# for the workspace to stay in the processor's cache.
-BATCH_SAMPLES = 98_304
-# Transforms run side by side in the lanes of a vector register of 16 bytes where there are as
-# many, and those left over one by one, which takes twice as long each.
-LANE_BYTES = 16
+# Bytes of samples in one pair of transforms: large enough to hide the cost of a call, small
+# enough for samples and spectra to stay in the processor's cache.
+BATCH_BYTES = 1 << 20
 
-# A copy that turns time-major rows channel-major runs in strips of this many samples a
-# row, so that what it reads is still in cache when the next row needs it.
-_STRIP = 1024
+# Bytes of a time-major run turned channel-major at a time: half of a usual first-level cache,
+# so that a line read for one row is still there for the next.
+_STRIP_BYTES = 1 << 15
+
+# Rows that lie a multiple of this apart fall into the same few sets of a first-level cache,
+# which makes reading them side by side two to three times slower.
+_ALIAS_BYTES = 1024
+
+Spectra = NDArray[np.complexfloating[Any, Any]]
+
+
+def is_channel_major(rows: Samples) -> bool:
+    """Whether the samples of a row lie side by side."""
+    return rows.shape[0] == 1 or rows.shape[1] < 2 or rows.strides[1] == rows.itemsize
 
 
 def copy_rows(target: Samples, source: Samples) -> None:
-    """Copies rows of samples, in strips where one of the two is not channel-major."""
-    count = source.shape[1]
-    straight = source.strides[1] == source.itemsize and target.strides[1] == target.itemsize
-    if straight or source.shape[0] == 1 or count <= _STRIP:
+    """Copies rows of samples; in strips where a time-major source turns channel-major."""
+    # NumPy walks in the target's order: into a time-major target it reads all rows side by
+    # side, which the cache keeps up with; only the other direction jumps in what it reads.
+    if is_channel_major(source) or not is_channel_major(target):
         target[...] = source
         return
-    for start in range(0, count, _STRIP):
-        target[:, start : start + _STRIP] = source[:, start : start + _STRIP]
+    width = max(64, _STRIP_BYTES // abs(source.strides[1] or 1))
+    for start in range(0, source.shape[1], width):
+        target[:, start : start + width] = source[:, start : start + width]
+
+
+class _Workspace(threading.local):
+    """Memory for transforms: one a thread, so that kernels need not carry it.
+
+    Fresh arrays of this size may cost half as much as their transforms, where the C library
+    gives freed memory back to the system and every page of the next is mapped anew. What a
+    push returns is never part of it.
+    """
+
+    def __init__(self) -> None:
+        self.room = np.empty(0, np.uint8)
+
+    def arrays(self, rows: int, size: int, dtype: np.dtype[Any]) -> tuple[Samples, Spectra]:
+        """Arrays for samples (rows, size) and their spectra, holding anything."""
+        samples = rows * size * dtype.itemsize
+        spectra = rows * (size // 2 + 1) * 2 * dtype.itemsize
+        aligned = -(-samples // 64) * 64
+        if self.room.size < aligned + spectra:
+            self.room = np.empty(aligned + spectra, np.uint8)
+        part = self.room[aligned : aligned + spectra].view(_complex_of(dtype))
+        return self.room[:samples].view(dtype).reshape(rows, size), part.reshape(rows, -1)
+
+
+_WORKSPACE = _Workspace()
+
+
+def _complex_of(dtype: np.dtype[Any]) -> np.dtype[Any]:
+    return np.dtype(np.complex64 if dtype.itemsize == 4 else np.complex128)
 
 
 class OverlapAdd(Comparable):
@@ -75,10 +113,11 @@ class OverlapAdd(Comparable):
         self.dtype = np.dtype(dtype)
         padded = np.zeros(transform)
         padded[: taps.size] = taps
-        spectrum = scipy.fft.rfft(padded)
-        self.spectrum = spectrum.astype(
-            np.complex64 if self.dtype.itemsize == 4 else spectrum.dtype
-        )
+        # The forward transform divides by N (see `_filter`), which the taps' spectrum makes good.
+        self.spectrum: Spectra = (np.fft.rfft(padded) * transform).astype(_complex_of(self.dtype))
+        # How many rows the FFT takes through a transform at once, one in each lane of a
+        # 16-byte register; a row left over costs more than half of what all lanes cost.
+        self.lanes = 16 // self.dtype.itemsize
         self.filled = start % hop
         self.block_start = start - self.filled
         self.emit_from = emit_from
@@ -88,87 +127,112 @@ class OverlapAdd(Comparable):
     def push(self, rows: Samples) -> Samples:
         """Takes rows of shape (rows, n), all finite; gives the positions now complete."""
         count = rows.shape[1]
-        parts: list[Samples] = []
-        used = 0
-        if self.filled or count < self.hop:
-            used = min(self.hop - self.filled, count)
-            if self.block.shape[1] < self.hop:
-                self.block = np.zeros((self.rows, self.hop), self.dtype)
-            copy_rows(self.block[:, self.filled : self.filled + used], rows[:, :used])
-            self.filled += used
-            if self.filled == self.hop:
-                parts.append(self._convolve(self.block, 1))
-                self.filled = 0
-        whole = (count - used) // self.hop
-        if whole:
-            stop = used + whole * self.hop
-            parts.append(self._convolve(rows[:, used:stop], whole))
-            used = stop
-        if used < count:
-            if self.block.shape[1] < self.hop:
-                self.block = np.zeros((self.rows, self.hop), self.dtype)
-            self.filled = count - used
-            copy_rows(self.block[:, : self.filled], rows[:, used:])
-        return self._joined(parts)
+        blocks, left = divmod(self.filled + count, self.hop)
+        out = self._new_run(blocks * self.hop)
+        if blocks:
+            self._convolve(rows, out)
+            self._hold(rows[:, count - left :], 0)
+        else:
+            self._hold(rows, self.filled)
+        self.filled = left
+        return self._published(out)
 
     def finish(self) -> Samples:
         """The input has ended: the positions up to its end."""
         if not self.filled:
             return np.zeros((self.rows, 0), self.dtype)
-        self.block[:, self.filled :] = 0
         unused = self.hop - self.filled
+        out = self._new_run(self.hop)
+        self._convolve(np.broadcast_to(self.dtype.type(0), (self.rows, unused)), out)
         self.filled = 0
-        out = self._joined([self._convolve(self.block, 1)])
+        out = self._published(out)
         return out[:, : max(0, out.shape[1] - unused)]
 
-    def _joined(self, parts: list[Samples]) -> Samples:
-        """The parts as one run of positions, without those before ``emit_from``."""
-        if not parts:
-            return np.zeros((self.rows, 0), self.dtype)
-        out = parts[0] if len(parts) == 1 else np.concatenate(parts, axis=1)
+    def _new_run(self, length: int) -> Samples:
+        """Room for results; rows start at uneven distances, see `_ALIAS_BYTES`."""
+        aliased = length * self.dtype.itemsize % _ALIAS_BYTES == 0
+        pitch = length + 64 // self.dtype.itemsize if aliased else length
+        return np.empty((self.rows, pitch), self.dtype)[:, :length]
+
+    def _hold(self, rows: Samples, at: int) -> None:
+        """Keeps samples of a block that is not full yet, from its sample ``at`` on."""
+        count = rows.shape[1]
+        if count and not self.block.shape[1]:
+            self.block = np.zeros((self.rows, self.hop), self.dtype)
+        copy_rows(self.block[:, at : at + count], rows)
+
+    def _published(self, out: Samples) -> Samples:
+        """The run of positions just completed, without those before ``emit_from``."""
+        self.block_start += out.shape[1]
         out = out[:, max(0, out.shape[1] - max(0, self.block_start - self.emit_from)) :]
         self.emit_from += out.shape[1]
         return out
 
-    def _convolve(self, rows: Samples, blocks: int) -> Samples:
-        """``blocks`` full blocks, laid end to end in ``rows``; their completed positions."""
-        hop, size = self.hop, self.transform
-        out = np.empty((self.rows, blocks * hop), self.dtype)
-        lanes = LANE_BYTES // self.dtype.itemsize
-        together = max(1, BATCH_SAMPLES // size // lanes) * lanes
-        many = min(blocks, together)
-        high = -(-together // many)
-        # Rows that lie a power of two apart would share the cache's few lines for them.
-        work = np.zeros((min(high, self.rows), many, size + 16), self.dtype)[..., :size]
-        for top in range(0, self.rows, high):
-            group = slice(top, min(top + high, self.rows))
-            count = group.stop - group.start
-            for first in range(0, blocks, many):
-                run = min(many, blocks - first)
-                span = slice(first * hop, (first + run) * hop)
-                part = work[:count, :run]
-                for index in range(run):
-                    low = (first + index) * hop
-                    copy_rows(part[:, index, :hop], rows[group, low : low + hop])
-                spectra = scipy.fft.rfft(part, axis=-1)
-                np.multiply(spectra, self.spectrum, out=spectra)
-                results = scipy.fft.irfft(spectra, n=size, axis=-1, overwrite_x=True)
-                target = out[group, span].reshape(count, run, hop)
-                self._add(target, results, self.overhang[group])
-        self.block_start += blocks * hop
-        return out
+    def _convolve(self, rows: Samples, out: Samples) -> None:
+        """Full blocks, the first of them begun by what is held; their completed positions."""
+        hop, size, lanes = self.hop, self.transform, self.lanes
+        blocks = out.shape[1] // hop
+        together = max(1, BATCH_BYTES // (size * self.dtype.itemsize * lanes)) * lanes
+        high = min(self.rows, together)
+        many = min(blocks, together // high)
+        work, spectra = _WORKSPACE.arrays(-(-high * many // lanes) * lanes, size, self.dtype)
+        # What overflows is seen in the results, by whoever takes them.
+        with np.errstate(over="ignore", invalid="ignore"):
+            for top in range(0, self.rows, high):
+                group = slice(top, min(top + high, self.rows))
+                count = group.stop - group.start
+                for first in range(0, blocks, many):
+                    run = min(many, blocks - first)
+                    used = count * run
+                    part = work[:used].reshape(count, run, size)
+                    self._lay(part, rows[group], group, first)
+                    # Two or more rows left over go faster as a full set of lanes.
+                    full = -(-used // lanes) * lanes if used % lanes > 1 else used
+                    work[used:full] = 0
+                    self._filter(work[:full], spectra[:full])
+                    target = out[group, first * hop : (first + run) * hop]
+                    self._add(target.reshape(count, run, hop), part, self.overhang[group])
+
+    def _lay(self, part: Samples, rows: Samples, group: slice, first: int) -> None:
+        """Lays blocks ``first`` and on of a group of rows into the workspace."""
+        hop, run = self.hop, part.shape[1]
+        part[:, :, hop:] = 0
+        straight = is_channel_major(rows) or hop * abs(rows.strides[1]) <= _STRIP_BYTES
+        start = first * hop - self.filled
+        if start < 0:
+            part[:, 0, : self.filled] = self.block[group, : self.filled]
+            copy_rows(part[:, 0, self.filled : hop], rows[:, : start + hop])
+            part, run, start = part[:, 1:], run - 1, start + hop
+        fresh = rows[:, start : start + run * hop].reshape(rows.shape[0], run, hop)
+        if straight:
+            part[:, :, :hop] = fresh
+            return
+        for index in range(run):
+            copy_rows(part[:, index, :hop], fresh[:, index])
+
+    def _filter(self, work: Samples, spectra: Spectra) -> None:
+        """Convolves padded blocks with the taps, in place."""
+        # numpy.fft, not scipy.fft, because it writes where it is told to (in any precision,
+        # which its types deny). Both ways divide by N, for speed: without a factor of the
+        # array's own type NumPy takes float32 through double precision.
+        np.fft.rfft(work, norm="forward", out=spectra)  # type: ignore[arg-type]
+        np.multiply(spectra, self.spectrum, out=spectra)
+        np.fft.irfft(spectra, n=self.transform, out=work)  # type: ignore[arg-type]
 
     def _add(self, target: Samples, results: Samples, overhang: Samples) -> None:
         """Adds the blocks' results where they overlap, earlier blocks first."""
         hop, overlap = self.hop, self.overlap
-        run = target.shape[1]
         if overlap <= hop:
-            target[...] = results[:, :, :hop]
-            target[:, 0, :overlap] += overhang
-            target[:, 1:, :overlap] += results[:, :-1, hop : hop + overlap]
+            target[:, :, overlap:] = results[:, :, overlap:hop]
+            np.add(overhang, results[:, 0, :overlap], out=target[:, 0, :overlap])
+            np.add(
+                results[:, :-1, hop : hop + overlap],
+                results[:, 1:, :overlap],
+                out=target[:, 1:, :overlap],
+            )
             overhang[...] = results[:, -1, hop : hop + overlap]
             return
-        for index in range(run):
+        for index in range(target.shape[1]):
             target[:, index] = overhang[:, :hop] + results[:, index, :hop]
             overhang[:, : overlap - hop] = overhang[:, hop:]
             overhang[:, overlap - hop :] = 0

@@ -7,7 +7,7 @@ from math import prod
 
 from pipeline_filters.chain.model import TapsStage
 from pipeline_filters.errors import BudgetError, Problem
-from pipeline_filters.kernels.overlap_add import BATCH_SAMPLES
+from pipeline_filters.kernels.overlap_add import BATCH_BYTES
 from pipeline_filters.layout import without
 from pipeline_filters.spans import PIECE_SAMPLES
 from pipeline_filters.stage.compiling import CompiledResult
@@ -39,7 +39,7 @@ def step_bytes(compiled: CompiledResult) -> int:
     for stage in compiled.chain.stages:
         if isinstance(stage, TapsStage):
             held = 4 * stage.hop + 3 * stage.taps.size
-            flowing += rows * held * working + 3 * max(BATCH_SAMPLES, stage.transform) * working
+            flowing += rows * held * working + 2 * max(BATCH_BYTES, 16 * stage.transform)
         else:
             flowing += rows * 3 * min(stage.rest, reader.length) * 8 + 2 * piece * 8
     stamps = 0 if reader.stamps is None else 4 * max(unit, reader.stamps.chunk_samples) * 8
