@@ -5,6 +5,7 @@ from __future__ import annotations
 import argparse
 import difflib
 import importlib
+import io
 import json
 import os
 import re
@@ -12,7 +13,13 @@ import signal
 import sys
 from typing import Any, NoReturn
 
-from pipeline_filters.errors import CommandLineError, FilterStageError, Problem, StoppedEarlyError
+from pipeline_filters.errors import (
+    CommandLineError,
+    FilterStageError,
+    Problem,
+    StoppedEarlyError,
+    SurroundingsError,
+)
 
 EXIT_CODES = """\
 exit codes:
@@ -36,6 +43,9 @@ on filtered data alone; follow local codes and licensed practice.
 
 COMMANDS = ("check", "forecast", "filter", "demo")
 
+# More than any one machine has cores for.
+MOST_WORKERS = 4096
+
 
 class _Parser(argparse.ArgumentParser):
     def error(self, message: str) -> NoReturn:
@@ -51,8 +61,10 @@ class _Parser(argparse.ArgumentParser):
 
 def build_parser() -> argparse.ArgumentParser:
     """All commands and options; nothing heavy is loaded."""
+    # Words in full: a shortened --json would be taken by some and not by others.
     parser = _Parser(
         prog="pipeline-filters",
+        allow_abbrev=False,
         description="Filters long multi-channel recordings in chunked Zarr stores, as a spec says; "
         "the numbers depend on spec and data alone.",
         epilog=f"{EXIT_CODES}\n{CAUTION}",
@@ -60,34 +72,40 @@ def build_parser() -> argparse.ArgumentParser:
     )
     parser.add_argument("--version", action="store_true", help="print the version and end")
     commands = parser.add_subparsers(dest="command", metavar="COMMAND")
-    spec = {"metavar": "SPEC", "help": "the YAML filter spec"}
-    source = {"metavar": "SOURCE", "help": "a Zarr store, or a group in one (store.zarr/group)"}
+    spec = {"metavar": "SPEC", "type": _path, "help": "the YAML filter spec"}
+    source = {
+        "metavar": "SOURCE",
+        "type": _path,
+        "help": "a Zarr store, or a group in one (store.zarr/group)",
+    }
 
-    check = commands.add_parser(
+    def add_command(name: str, help: str) -> argparse.ArgumentParser:
+        return commands.add_parser(name, help=help, allow_abbrev=False)
+
+    check = add_command(
         "check", help="design the filters of a spec and hold them to what they promise"
     )
     check.add_argument("spec", **spec)  # type: ignore[arg-type]
     check.add_argument("source", nargs="?", **source)  # type: ignore[arg-type]
 
-    forecast = commands.add_parser(
-        "forecast", help="say what a run will do and cost; reads no sample"
-    )
+    forecast = add_command("forecast", help="say what a run will do and cost; reads no sample")
     forecast.add_argument("spec", **spec)  # type: ignore[arg-type]
     forecast.add_argument("source", **source)  # type: ignore[arg-type]
 
-    run = commands.add_parser(
+    run = add_command(
         "filter", help="filter a source into a product; again, do what is missing and no more"
     )
     run.add_argument("spec", **spec)  # type: ignore[arg-type]
     run.add_argument("source", **source)  # type: ignore[arg-type]
-    run.add_argument("product", metavar="PRODUCT", help="the folder of the results")
+    run.add_argument("product", metavar="PRODUCT", type=_path, help="the folder of the results")
 
-    demo = commands.add_parser(
+    demo = add_command(
         "demo", help="make a small invented recording, filter it, and draw what happened"
     )
     demo.add_argument(
         "folder",
         nargs="?",
+        type=_path,
         default="weir-demo",
         metavar="FOLDER",
         help="where everything is laid down (default: weir-demo); new, or an earlier demo's",
@@ -114,9 +132,19 @@ def build_parser() -> argparse.ArgumentParser:
 
 
 def _count(text: str) -> int:
-    if not text.isascii() or not text.isdigit() or int(text) < 1:
-        raise argparse.ArgumentTypeError(f"{text!r} is no whole number from 1 on")
+    digits = text.isascii() and text.isdigit() and len(text) <= len(str(MOST_WORKERS))
+    if not digits or not 1 <= int(text) <= MOST_WORKERS:
+        raise argparse.ArgumentTypeError(
+            f"{text[:40]!r} is no whole number from 1 to {MOST_WORKERS}"
+        )
     return int(text)
+
+
+def _path(text: str) -> str:
+    # An empty path, as of a shell variable that is not set, would mean the current folder.
+    if not text.strip():
+        raise argparse.ArgumentTypeError("an empty path")
+    return text
 
 
 def main(arguments: list[str] | None = None) -> int:
@@ -137,6 +165,10 @@ def main(arguments: list[str] | None = None) -> int:
     except BrokenPipeError:  # whoever read what is printed has gone
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         return StoppedEarlyError.exit_code
+    except MemoryError:
+        found = "the machine's memory is used up"
+        remedy = "run again with fewer --workers or a lower --memory, or end other programs"
+        return _refused(SurroundingsError(Problem("", found, "", remedy)), as_json)
     except Exception as error:
         return _defect(error, as_json)
 
@@ -197,4 +229,7 @@ def _defect(error: Exception, as_json: bool) -> int:
 
 def console() -> NoReturn:
     """The installed command."""
+    # A path may hold what the terminal's encoding has no sign for.
+    if isinstance(sys.stdout, io.TextIOWrapper):
+        sys.stdout.reconfigure(errors="backslashreplace")
     sys.exit(main())
