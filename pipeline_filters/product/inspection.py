@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from pathlib import Path
 from typing import Any
 
@@ -11,7 +11,14 @@ import zarr
 
 from pipeline_filters.errors import Problem, ProductError
 from pipeline_filters.product.nodes import read_node
-from pipeline_filters.product.places import FORMAT, MARK, PARTIAL, REGISTER, lock_file
+from pipeline_filters.product.places import (
+    FORMAT,
+    MARK,
+    PARTIAL,
+    REGISTER,
+    lock_file,
+    result_folders,
+)
 from pipeline_filters.product.plan import ProductState, ResultState
 from pipeline_filters.product.refusals import refused_by_the_system
 from pipeline_filters.product.register import ARRAYS
@@ -37,7 +44,7 @@ def _inspected(root: Path) -> ProductState:
         raise _refusal(root, "a file lies there, not a product")
     if _only_begun(root):
         return ProductState("absent")
-    mark = _root_mark(root)
+    mark, nodes = _root_mark(root)
     listed = mark.get("results")
     if listed is None:
         return ProductState("absent")
@@ -46,6 +53,7 @@ def _inspected(root: Path) -> ProductState:
     for name, digest in listed.items():
         try:
             results[name] = _result_state(root, name, digest)
+            _read_all_nodes(root, name, nodes)
         except (OSError, KeyError, TypeError, ValueError, AttributeError) as error:
             detail = str(error).splitlines()[0] if str(error) else type(error).__name__
             problems.append(_damage(root / name, f"result {name} is damaged: {detail}"))
@@ -67,13 +75,15 @@ def _only_begun(root: Path) -> bool:
     )
 
 
-def _root_mark(root: Path) -> Mapping[str, Any]:
+def _root_mark(root: Path) -> tuple[Mapping[str, Any], Iterable[str]]:
+    """Our attribute of the root, and the names of all groups and arrays in its copy."""
     try:
         text = (root / "zarr.json").read_bytes()
     except FileNotFoundError:
         raise _refusal(root, "something that is not a product lies there") from None
     try:
-        mark = json.loads(text)["attributes"][MARK]
+        node = json.loads(text)
+        mark = node["attributes"][MARK]
         stored = mark["format"]
     except ValueError:
         raise ProductError(_damage(root / "zarr.json", "is damaged: not JSON")) from None
@@ -87,7 +97,17 @@ def _root_mark(root: Path) -> Mapping[str, Any]:
         and isinstance(mark.get("spec"), str)
     ):
         raise ProductError(_damage(root / "zarr.json", "is damaged: its attributes are not whole"))
-    return dict(mark)
+    copy = node.get("consolidated_metadata")
+    nodes = copy.get("metadata") if isinstance(copy, dict) else None
+    return dict(mark), nodes if isinstance(nodes, dict) else ()
+
+
+def _read_all_nodes(root: Path, name: str, nodes: Iterable[str]) -> None:
+    """Reads the metadata of all that the root knows of a result; raises where some is lost."""
+    tops = {str(folder.relative_to(root)) for folder in result_folders(root, name)}
+    for node in nodes:
+        if node in tops or any(node.startswith(f"{top}/") for top in tops):
+            read_node(root / node)
 
 
 def _result_state(root: Path, name: str, digest: str) -> ResultState:
