@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import secrets
+from contextlib import suppress
 from typing import Any
 
 
@@ -32,5 +33,7 @@ def write_file(path: str, data: Any) -> None:
             os.close(descriptor)
         os.replace(passing, path)
     except BaseException:
-        os.unlink(passing)
+        # A signal may come between the renaming and here.
+        with suppress(FileNotFoundError):
+            os.unlink(passing)
         raise
