@@ -62,7 +62,7 @@ def workers_within(
         raise BudgetError(
             Problem(
                 "--memory",
-                f"{budget_bytes // MIB} MiB cannot hold one step, which takes {enough} MiB",
+                f"{budget_bytes / MIB:.4g} MiB cannot hold one step, which takes {enough} MiB",
                 f"at least {enough} MiB for this spec and source",
                 f"state --memory '{enough} MiB', or give the results smaller chunks",
             )
