@@ -9,12 +9,15 @@ from __future__ import annotations
 import multiprocessing
 import os
 import signal
+import sys
 import threading
 from collections.abc import Callable, Iterator
 from concurrent.futures import ProcessPoolExecutor
 from concurrent.futures.process import BrokenProcessPool
 from contextlib import contextmanager
 from functools import partial
+from multiprocessing.context import ForkServerContext, ForkServerProcess
+from types import ModuleType
 from typing import Any
 
 from dask import multiprocessing as dask_processes
@@ -43,7 +46,7 @@ def schedulers(jobs: Jobs, workers: int, tasks: int) -> Iterator[Callable[..., A
         adopt(jobs)
         yield get_sync
         return
-    context = multiprocessing.get_context("forkserver")
+    context = _Context()
     pool = ProcessPoolExecutor(workers, context, initializer=_begin, initargs=(jobs,))
     try:
         yield partial(
@@ -63,6 +66,27 @@ def schedulers(jobs: Jobs, workers: int, tasks: int) -> Iterator[Callable[..., A
         ) from None
     finally:
         pool.shutdown(wait=True, cancel_futures=True)
+
+
+class _Process(ForkServerProcess):
+    """A process that does not run the calling script again.
+
+    Workers need nothing of it, and where it lacks the guard ``if __name__ == "__main__"``
+    each would begin the run anew; a script from standard input they could not even find.
+    """
+
+    @staticmethod
+    def _Popen(process_obj: Any) -> Any:  # noqa: N802
+        script = sys.modules["__main__"]
+        sys.modules["__main__"] = ModuleType("__main__")
+        try:
+            return ForkServerProcess._Popen(process_obj)
+        finally:
+            sys.modules["__main__"] = script
+
+
+class _Context(ForkServerContext):
+    Process = _Process
 
 
 def _begin(jobs: Jobs) -> None:

@@ -59,8 +59,8 @@ def run(
     The source is taken as complete, and its ends by the ends rule.
 
     Args:
-        workers: processes; 1 is this one alone. With more, the calling script needs the usual
-            guard ``if __name__ == "__main__"``.
+        workers: processes; 1 is this one alone. With more, the calling script needs no guard
+            ``if __name__ == "__main__"``: workers do not run it.
         budget_bytes: memory for the whole run; fewer workers are taken where it is short.
         progress: called with the results' samples done so far and in all.
         span_samples: values in a unit of work; chosen where None. The numbers do not
