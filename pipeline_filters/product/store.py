@@ -107,6 +107,7 @@ class Product:
             refuse_disagreement(root, state, identity, plans)
             with refused_by_the_system(root):
                 product._complete(state, spec_text, identity, plans)
+                clear_partial_files(root, ())
         product._note_layouts(plans)
         return product
 
