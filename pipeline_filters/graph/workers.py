@@ -16,6 +16,7 @@ from concurrent.futures import ProcessPoolExecutor
 from concurrent.futures.process import BrokenProcessPool
 from contextlib import contextmanager
 from functools import partial
+from multiprocessing import forkserver, resource_tracker
 from multiprocessing.context import ForkServerContext, ForkServerProcess
 from types import ModuleType
 from typing import Any
@@ -47,8 +48,13 @@ def schedulers(jobs: Jobs, workers: int, tasks: int) -> Iterator[Callable[..., A
         yield get_sync
         return
     context = _Context()
+    _start_fork_server()
     pool = ProcessPoolExecutor(workers, context, initializer=_begin, initargs=(jobs,))
     try:
+        with _signals_later():
+            # Each of these starts a worker.
+            for _ in range(min(workers, tasks)):
+                pool.submit(_nothing)
         yield partial(
             dask_processes.get,
             pool=pool,
@@ -89,9 +95,47 @@ class _Context(ForkServerContext):
     Process = _Process
 
 
+def _start_fork_server() -> None:
+    """Starts the process that workers come of, deaf to Ctrl-C from its first moment.
+
+    Ctrl-C reaches every process of a terminal: the first one decides, workers end their span.
+    A process that is still loading its libraries would tell of it with a traceback. What is
+    blocked here stays blocked in what is started meanwhile, and nothing is lost here.
+    """
+    resource_tracker.ensure_running()  # which would take the block away
+    before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
+    try:
+        forkserver.ensure_running()
+    finally:
+        signal.pthread_sigmask(signal.SIG_SETMASK, before)
+
+
+@contextmanager
+def _signals_later() -> Iterator[None]:
+    """Lets a stop wait: a worker that starts meanwhile would not be known, and not be ended."""
+    if threading.current_thread() is not threading.main_thread():
+        yield  # elsewhere no signal arrives
+        return
+    came: list[int] = []
+    before = {
+        number: signal.signal(number, lambda number, _: came.append(number))
+        for number in (signal.SIGINT, signal.SIGTERM)
+    }
+    try:
+        yield
+    finally:
+        for number, handler in before.items():
+            signal.signal(number, signal.SIG_DFL if handler is None else handler)
+        for late in came:
+            signal.raise_signal(late)
+
+
+def _nothing() -> None:
+    """A task that starts a worker."""
+
+
 def _begin(jobs: Jobs) -> None:
     """What a worker does first."""
-    # Ctrl-C reaches every process of a terminal: the first one decides, workers end their span.
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     threading.Thread(target=_end_with_parent, daemon=True).start()
     adopt(jobs)
