@@ -16,7 +16,6 @@ from concurrent.futures import ProcessPoolExecutor
 from concurrent.futures.process import BrokenProcessPool
 from contextlib import contextmanager
 from functools import partial
-from multiprocessing import forkserver, resource_tracker
 from multiprocessing.context import ForkServerContext, ForkServerProcess
 from types import ModuleType
 from typing import Any
@@ -25,6 +24,7 @@ from dask import multiprocessing as dask_processes
 from dask.local import get_sync
 
 from pipeline_filters.errors import Problem, StoppedEarlyError
+from pipeline_filters.graph.fork_server import start_fork_server
 from pipeline_filters.graph.span_tasks import adopt
 from pipeline_filters.spans import Jobs
 
@@ -48,7 +48,7 @@ def schedulers(jobs: Jobs, workers: int, tasks: int) -> Iterator[Callable[..., A
         yield get_sync
         return
     context = _Context()
-    _start_fork_server()
+    start_fork_server()
     pool = ProcessPoolExecutor(workers, context, initializer=_begin, initargs=(jobs,))
     try:
         with _signals_later():
@@ -93,21 +93,6 @@ class _Process(ForkServerProcess):
 
 class _Context(ForkServerContext):
     Process = _Process
-
-
-def _start_fork_server() -> None:
-    """Starts the process that workers come of, deaf to Ctrl-C from its first moment.
-
-    Ctrl-C reaches every process of a terminal: the first one decides, workers end their span.
-    A process that is still loading its libraries would tell of it with a traceback. What is
-    blocked here stays blocked in what is started meanwhile, and nothing is lost here.
-    """
-    resource_tracker.ensure_running()  # which would take the block away
-    before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
-    try:
-        forkserver.ensure_running()
-    finally:
-        signal.pthread_sigmask(signal.SIG_SETMASK, before)
 
 
 @contextmanager

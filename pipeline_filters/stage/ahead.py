@@ -6,8 +6,7 @@ one core what this process loads on another.
 
 from __future__ import annotations
 
-import multiprocessing
-from multiprocessing import forkserver
+from pipeline_filters.graph.fork_server import start_fork_server
 
 # What a worker needs: how to run a span, to read and to write.
 PARTS = (
@@ -20,5 +19,4 @@ PARTS = (
 def start_workers_early(workers: int) -> None:
     """Starts the process that workers are forked from, unless it runs or none are wanted."""
     if workers > 1:
-        multiprocessing.set_forkserver_preload(list(PARTS))
-        forkserver.ensure_running()
+        start_fork_server(PARTS)

@@ -72,10 +72,10 @@ SPECS = {
     "several at once": (
         changed(("1 kHz", "1000"), ("hold", "holt"), ("[mean]", "[men]")),
         3,
-        "~/weir.yaml:4:44: sample_rate: 1000, a number without a unit; a frequency such as 50 Hz "
-        "or 2 / day; write 1000 Hz if that is meant\n"
-        "~/weir.yaml:8:35: through: no such filter men; mean; did you mean mean?\n"
-        "~/weir.yaml:8:62: ends: holt; zero, hold, even, odd or blank; did you mean hold?",
+        "~/weir.yaml:4:44: sample_rate: 1000, a number without a unit; a frequency above 0 with "
+        "its unit, such as 50 Hz, 1 kHz or 2 / day; write 1000 Hz if that is meant\n"
+        "~/weir.yaml:8:35: through: no filter is named men; mean; did you mean mean?\n"
+        "~/weir.yaml:8:63: ends: holt; zero, hold, even, odd or blank; did you mean hold?",
     ),
 }
 
