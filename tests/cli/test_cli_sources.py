@@ -90,8 +90,8 @@ SOURCES = {
     "too few stamps": (
         None,
         {"stamps": CLOCK[:10]},
-        "~/source.zarr, coordinate time: its shape is (10,); one stamp for each of 1000 samples; "
-        "mend the source, so that every sample has one stamp",
+        "~/source.zarr, coordinate time: its shape is (10,) along time; one stamp for each of "
+        "1000 samples along time; mend the source, so that every sample has one stamp",
     ),
 }
 
@@ -113,10 +113,11 @@ def test_a_source_that_is_none(tmp_path, capsys):
         tmp_path / "nothing": "~/nothing: no such path; a Zarr group on a local path; name the "
         "store, or a group in it",
         spec: "~/weir.yaml: a file; a Zarr group on a local path; name the store, or a group in it",
-        tmp_path: "~: not a Zarr group (GroupNotFoundError); a Zarr group on a local path; name "
-        "the store, or a group in it",
-        tmp_path / "broken.zarr": "~/broken.zarr: not a Zarr group (JSONDecodeError); a Zarr "
-        "group on a local path; name the store, or a group in it",
+        tmp_path: "~: not a Zarr group; a Zarr group on a local path; name the store, or a "
+        "group in it",
+        tmp_path / "broken.zarr": "~/broken.zarr: its metadata cannot be read "
+        "(JSONDecodeError: Expecting property name enclosed in double quotes: line 1 column 2 "
+        "(char 1)); a Zarr group on a local path; restore the group's metadata from its origin",
         source / "velocity": "~/source.zarr/velocity: one array; a Zarr group on a local path; "
         "name the group that it lies in: ~/source.zarr",
         "https://weir.example/plate.zarr": "https://weir.example/plate.zarr: not a local path; a "
@@ -191,6 +192,10 @@ BROKEN = {
 }
 
 
+BROKEN_SAYS = dict.fromkeys(BROKEN, "RuntimeError: Zstd decompression error: invalid input data")
+BROKEN_SAYS["empty"] = "ValueError: an empty file"
+
+
 @pytest.mark.parametrize(
     ("name", "workers"), [("truncated", 1), ("truncated", 2), ("empty", 1), ("other bytes", 1)]
 )
@@ -203,9 +208,9 @@ def test_a_broken_chunk_is_named(name, workers, tmp_path, capsys):
     said = call(capsys, "filter", spec, source, product, "--workers", workers, "--json")
     assert said.code == said.record["exit_code"] == 4
     assert said.err.replace(str(tmp_path), "~") == (
-        "~/source.zarr/velocity, chunk c/1/0: cannot be read (RuntimeError: Zstd decompression "
-        "error: invalid input data); whole chunks, or none (an absent chunk is fill); restore "
-        "the chunk from its origin, or delete it to have it read as fill\n"
+        f"~/source.zarr/velocity, chunk c/1/0: cannot be read ({BROKEN_SAYS[name]}); whole "
+        "chunks, or none (an absent chunk is fill); restore the chunk from its origin, or delete "
+        "it to have it read as fill\n"
     )
     assert tree(source) == before
     chunk.write_bytes(whole)
