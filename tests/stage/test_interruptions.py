@@ -103,8 +103,8 @@ def test_twenty_random_ends(whole, tmp_path, capsys):
     for turn in range(20):
         product = tmp_path / f"product-{turn // 4}"
         command = ["filter", spec, source, product, "--workers"]
-        process = begin_slowly([*command, chance.randint(1, 3)], pause=0.01)
-        time.sleep(chance.uniform(0.05, 4))
+        process = begin_slowly([*command, chance.randint(1, 3)], pause=0.02)
+        time.sleep(chance.uniform(0.05, 2.5))
         kind = chance.choice(["kill", "group", "interrupt", "terminate", "worker"])
         workers = workers_of(process.pid)
         if kind == "kill":
