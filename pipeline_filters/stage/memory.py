@@ -34,7 +34,7 @@ def step_bytes(compiled: CompiledResult) -> int:
     keeping = (2 * unit + read) * raw
     filling = 3 * unit * rows * compiled.dtype.itemsize
     working = compiled.chain.dtype.itemsize
-    piece = min(max(4096 * rows, PIECE_SAMPLES), reader.length * rows)
+    piece = min(max(4096 * rows, PIECE_SAMPLES), read * rows)
     flowing = 6 * piece * working
     for stage in compiled.chain.stages:
         if isinstance(stage, TapsStage):

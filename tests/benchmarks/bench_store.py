@@ -112,10 +112,10 @@ def main() -> None:
 
 
 IDLE = """\
-import resource
 import pipeline_filters.graph.workers, pipeline_filters.source.zarr_source
 import pipeline_filters.product.writer
-print(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss * 1024)
+from pipeline_filters.spans import peak_bytes
+print(peak_bytes())
 """
 
 
