@@ -1,7 +1,7 @@
 """Who runs the tasks: this process alone, or worker processes beside it.
 
-Processes, since in threads small transforms lose half of a second core to the interpreter's
-lock. The jobs are sent to each worker once, as it starts; a task is a name and a few numbers.
+Processes, since threads lose some of a second core to the interpreter's lock (DEVELOPERS.md has
+the figures). The jobs are sent to each worker once, as it starts; a task is a name and a few numbers.
 """
 
 from __future__ import annotations
