@@ -337,14 +337,15 @@ def _refuse_overflow(
     if not wrong.any():
         return
     row, column = (int(at[0]) for at in np.nonzero(wrong))
+    declare = "declare the offending values as missing in the source (missing_value or valid_range)"
+    if np.isfinite(slab.values[row, column]):
+        found = f"result {result} is too large for {dtype} here"
+        largest, remedy = np.finfo(dtype).max, f"{declare}, or state keep_as: float64"
+    else:  # sums over a block have overflowed: the culprit may lie elsewhere in it
+        found = f"result {result} cannot be formed here: a sample of the same block is too large"
+        largest, remedy = np.finfo(slab.values.dtype).max, declare
     raise SourceError(
-        Problem(
-            place(row, column),
-            f"result {result} is too large for {dtype} here",
-            f"magnitudes up to {np.finfo(dtype).max:.3g}",
-            "declare the offending values as missing in the source (missing_value or "
-            "valid_range), or state keep_as: float64",
-        )
+        Problem(place(row, column), found, f"magnitudes well below {largest:.3g}", remedy)
     )
 
 

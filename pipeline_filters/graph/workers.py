@@ -1,7 +1,8 @@
 """Who runs the tasks: this process alone, or worker processes beside it.
 
 Processes, since threads lose some of a second core to the interpreter's lock (DEVELOPERS.md has
-the figures). The jobs are sent to each worker once, as it starts; a task is a name and a few numbers.
+the figures). The jobs are sent to each worker once, as it starts; a task is a name and a few
+numbers.
 """
 
 from __future__ import annotations

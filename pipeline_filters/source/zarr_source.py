@@ -225,10 +225,17 @@ def _reader(fit: Fit) -> ZarrReader:
         **fit.reader_facts(),
         stamps=stamps,
         chunks=fit.clipped(array.chunks),
-        shards=None if array.shards is None else fit.clipped(array.shards),
+        shards=None if array.shards is None else _whole_shards(fit, array),
         path=array.path,
         array=array,
     )
+
+
+def _whole_shards(fit: Fit, array: StoredArray) -> tuple[int, ...]:
+    """Shards no longer than what is kept, but of whole chunks, as shards must be."""
+    assert array.shards is not None
+    sizes = zip(fit.clipped(array.shards), fit.clipped(array.chunks), strict=True)
+    return tuple(-(-shard // chunk) * chunk for shard, chunk in sizes)
 
 
 def _open_group(path: str) -> Any:

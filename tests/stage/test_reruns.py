@@ -86,3 +86,35 @@ def test_two_signals_of_two_rates_open_as_a_tree(tmp_path):
     run(text, path, tmp_path / "p.zarr")
     tree = open_product(tmp_path / "p.zarr")
     assert set(tree.children) == {"mean", "tide"}
+
+
+@pytest.mark.parametrize(
+    ("shape", "chunks", "shards", "keep"),
+    [
+        ((1050,), (100,), (2000,), ""),  # a shard longer than the young archive
+        ((1000, 3), (100, 2), (1000, 4), ""),
+        ((1000, 4), (100, 2), (1000, 4), ", channels: {dimension: c, keep: [1, 2, 3]}"),
+    ],
+)
+def test_shards_that_pass_the_end(tmp_path, shape, chunks, shards, keep):
+    group = zarr.open_group(str(tmp_path / "s.zarr"), mode="w")
+    names = ["time", "c"][: len(shape)]
+    values = np.random.default_rng(1).standard_normal(shape)
+    group.create_array("velocity", data=values, chunks=chunks, shards=shards, dimension_names=names)
+    if len(shape) > 1:
+        group.create_array("c", data=np.arange(shape[1]), dimension_names=["c"])
+    text = SPREADING.replace("missing: spread", f"missing: spread{keep}")
+    for span_samples in (100, None):
+        product = tmp_path / f"p{span_samples}.zarr"
+        run(text, str(tmp_path / "s.zarr"), product, span_samples=span_samples)
+        got = open_product(product)["mean"].values
+        kept = values[:, 1:] if keep else values
+        np.testing.assert_allclose(got[10], kept[8:13].mean(axis=0), rtol=1e-12)
+        assert np.isfinite(got).all()
+
+
+def test_a_sample_that_spoils_a_block_is_not_blamed_on_another(tmp_path):
+    path = source(tmp_path / "s.zarr", 10)
+    zarr.open_array(path + "/velocity", mode="r+")[50] = 1.7e308
+    with pytest.raises(SourceError, match="a sample of the same block is too large"):
+        run(SPREADING, path, tmp_path / "p.zarr")
