@@ -14,6 +14,7 @@ from pipeline_filters.errors import Problem, SourceError, StoppedEarlyError
 from pipeline_filters.graph.span_tasks import run_graph
 from pipeline_filters.graph.workers import schedulers
 from pipeline_filters.layout import Span, UnitGrid
+from pipeline_filters.product.refusals import refuse_overlap
 from pipeline_filters.product.register import Register
 from pipeline_filters.product.store import Product
 from pipeline_filters.product.surroundings import surroundings
@@ -75,6 +76,8 @@ def run(
     began = time.perf_counter()
     start_workers_early(workers)
     spec = as_spec(spec)
+    # First of all: "take away what lies there" must not be said of the source.
+    refuse_overlap(product, source)
     state = Product.inspect(product)
     chains, stored = chains_of(spec, product, state)
     opened = open_zarr_source(source, used_signals(spec))

@@ -131,13 +131,14 @@ def test_foreign_places(made, tmp_path, capsys):
     (tmp_path / "notes" / "notes.txt").write_text("mine")
     other = store(tmp_path / "other.zarr")
     allowed = f"an empty place or a product of this program; {REMEDY}"
+    apart = "source and product are two separate stores; name another path"
     source = made[2]
     for place, code, message in (
         ("notes", 5, f"~/notes: something that is not a product lies there; {allowed}"),
         ("notes/notes.txt", 5, f"~/notes/notes.txt: a file lies there, not a product; {allowed}"),
         ("other.zarr", 5, f"~/other.zarr: a Zarr store of another program lies there; {allowed}"),
-        ("source.zarr", 5, f"~/source.zarr: a Zarr store of another program lies there; {allowed}"),
-        ("", 5, f"~: something that is not a product lies there; {allowed}"),
+        ("source.zarr", 4, f"~/source.zarr: the product's path is the source's; {apart}"),
+        ("", 4, f"~: the source ~/source.zarr lies inside the product; {apart}"),
         (
             "source.zarr/in",
             4,

@@ -108,13 +108,14 @@ def test_a_source_that_does_not_fit(name, tmp_path, capsys):
 def test_a_source_that_is_none(tmp_path, capsys):
     spec, source = spec_file(tmp_path), store(tmp_path / "source.zarr")
     (tmp_path / "broken.zarr").mkdir()
+    (tmp_path / "empty").mkdir()
     (tmp_path / "broken.zarr" / "zarr.json").write_text("{")
     for place, message in {
         tmp_path / "nothing": "~/nothing: no such path; a Zarr group on a local path; name the "
         "store, or a group in it",
         spec: "~/weir.yaml: a file; a Zarr group on a local path; name the store, or a group in it",
-        tmp_path: "~: not a Zarr group; a Zarr group on a local path; name the store, or a "
-        "group in it",
+        tmp_path / "empty": "~/empty: not a Zarr group; a Zarr group on a local path; name the "
+        "store, or a group in it",
         tmp_path / "broken.zarr": "~/broken.zarr: its metadata cannot be read "
         "(JSONDecodeError: Expecting property name enclosed in double quotes: line 1 column 2 "
         "(char 1)); a Zarr group on a local path; restore the group's metadata from its origin",
